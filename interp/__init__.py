@@ -1,0 +1,1 @@
+"""Onsets with errors to depths and velocities with intervals."""

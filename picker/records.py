@@ -1,14 +1,24 @@
 """ShotRecord: the samples of one shot on the record's own clock, with where everything stood.
 
-Readers of file formats live in modules of their own (`picker.segy`); they all give ShotRecords.
+Readers of file formats live in modules of their own (`picker.segy`); they all give ShotHeaders, from which a
+ShotRecord is read when its samples are wanted.
 """
 
 from __future__ import annotations
 
+import os
+from collections.abc import Iterable
 from dataclasses import dataclass, field
+from pathlib import Path
+from typing import TYPE_CHECKING
 
 import numpy as np
 import numpy.typing as npt
+
+from picker.errors import InputError
+
+if TYPE_CHECKING:
+    from picker.findings import Finding
 
 FloatArray = npt.NDArray[np.float64]
 TRACE_STATES = ("live", "dead", "clipped", "noisy")
@@ -118,3 +128,210 @@ class ShotRecord:
             self.receiver_xyz[:, 0] - self.source_xyz[0], self.receiver_xyz[:, 1] - self.source_xyz[1]
         )
         return offset
+
+
+@dataclass(frozen=True, eq=False)
+class ShotHeader:
+    """One shot as it lies in a file: everything of a ShotRecord but its samples, and where those are.
+
+    Parameters
+    ----------
+    record, original_record : int
+        Record number that is unique in the survey, and the one the file gives.
+    interval_s, start_s, channel, source_xyz, receiver_xyz, source_depth_m, valid, state, polarity
+        As in ShotRecord.
+    file : Path
+        The file with the samples; meaningless where `encoding` is empty.
+    format : str
+        Name of the format, for people.
+    encoding : str
+        Byte order and kind of the samples (`picker.samples`); empty where there are picks only, no samples.
+    first_byte : int
+        Byte offset of the first trace, from 0.
+    sample_byte : int (traces,)
+        Byte offset of each trace's first sample, from 0.
+    """
+
+    record: int
+    original_record: int
+    interval_s: float
+    start_s: FloatArray
+    channel: npt.NDArray[np.int64]
+    source_xyz: FloatArray
+    receiver_xyz: FloatArray
+    source_depth_m: float
+    valid: npt.NDArray[np.int64]
+    state: npt.NDArray[np.str_]
+    polarity: npt.NDArray[np.int64]
+    file: Path
+    format: str
+    encoding: str
+    first_byte: int
+    sample_byte: npt.NDArray[np.int64]
+
+    @property
+    def has_samples(self) -> bool:
+        """True where there is a file with samples, False where there are picks only."""
+        return bool(self.encoding)
+
+
+def read_shot(header: ShotHeader) -> ShotRecord:
+    """Read the samples of one shot.
+
+    Parameters
+    ----------
+    header : ShotHeader
+        Where the shot lies.
+
+    Returns
+    -------
+    ShotRecord
+        A trace with samples that are not numbers is `dead` and zero throughout: nothing on it can be believed.
+
+    Raises
+    ------
+    InputError
+        If there are no samples, or the file cannot be read or is shorter than it was.
+    """
+    from picker.samples import read_samples, sample_bytes
+
+    if not header.has_samples:
+        raise InputError(
+            "there are picks only, no samples",
+            record=header.record,
+            remedy="Load the file with the shot record first",
+        )
+    try:
+        size = header.file.stat().st_size
+        end = int((header.sample_byte + header.valid * sample_bytes(header.encoding)).max())
+        if size < end:
+            raise InputError(
+                "the file is shorter than when it was loaded",
+                file=header.file,
+                record=header.record,
+                expected=f"at least {end} bytes",
+                found=f"{size}",
+                remedy="Put the original file back",
+            )
+        samples = read_samples(header.file, header.encoding, header.sample_byte, header.valid)
+    except OSError as error:
+        raise InputError(
+            f"cannot be read ({error.strerror or error})",
+            file=header.file,
+            record=header.record,
+            remedy="Put the file back where it was, or check who may read it",
+        ) from error
+    broken = ~np.isfinite(samples).all(axis=1)
+    samples[broken] = 0.0
+    return ShotRecord(
+        samples=samples,
+        interval_s=header.interval_s,
+        start_s=header.start_s,
+        record=header.record,
+        channel=header.channel,
+        source_xyz=header.source_xyz,
+        receiver_xyz=header.receiver_xyz,
+        source_depth_m=header.source_depth_m,
+        valid=header.valid,
+        state=np.where(broken, "dead", header.state),
+        polarity=header.polarity,
+        origin=Origin(os.fspath(header.file), header.format, header.first_byte),
+    )
+
+
+def scan_file(path: str | os.PathLike[str], interval_s: float | None = None) -> tuple[list[ShotHeader], list[Finding]]:
+    """Find the shots of one file of records, whatever its format, without reading the samples.
+
+    Parameters
+    ----------
+    path : path
+        The file.
+    interval_s : float, optional
+        Sample interval to use whatever the headers say, seconds.
+
+    Returns
+    -------
+    headers : list of ShotHeader
+        In the order of the file; record numbers are those of the file and unique in it.
+    findings : list of Finding
+        What a person should know.
+
+    Raises
+    ------
+    InputError
+        If the file cannot be read or is in no format that is read here.
+    """
+    from picker.segy import scan_segy
+
+    place = Path(path)
+    if not place.exists():
+        raise InputError("there is no such file", file=place, remedy="Check the path")
+    if place.is_dir():
+        raise InputError(
+            "is a folder",
+            file=place,
+            expected="a file of shot records",
+            found="a folder",
+            remedy="Name the files in it",
+        )
+    try:
+        with place.open("rb") as file:
+            start = file.read(4)
+    except OSError as error:
+        raise InputError(
+            f"cannot be read ({error.strerror or error})", file=place, remedy="Check who may read the file"
+        ) from error
+    if not start:
+        raise InputError(
+            "the file is empty",
+            file=place,
+            expected="shot records",
+            found="0 bytes",
+            remedy="Copy it again from the recorder",
+        )
+    if start[:2] in (b"\x55\x3a", b"\x3a\x55"):
+        raise InputError(
+            "is a SEG-2 file, which this version does not read yet",
+            file=place,
+            expected="SEG-Y",
+            found="the SEG-2 mark 3A55 in its first two bytes",
+            remedy="Write it as SEG-Y with the recorder's own program",
+        )
+    return scan_segy(place, interval_s)
+
+
+def read_records_and_findings(
+    paths: Iterable[str | os.PathLike[str]], interval_s: float | None = None
+) -> tuple[list[ShotRecord], list[Finding]]:
+    """Read all shots of some files with what a person should know of them; otherwise as `read_records`."""
+    records: list[ShotRecord] = []
+    findings: list[Finding] = []
+    for path in paths:
+        headers, found = scan_file(path, interval_s)
+        records += [read_shot(header) for header in headers]
+        findings += found
+    return records, findings
+
+
+def read_records(paths: Iterable[str | os.PathLike[str]], interval_s: float | None = None) -> list[ShotRecord]:
+    """Read all shots of some files.
+
+    Parameters
+    ----------
+    paths : iterable of path
+        Files of shot records, in any format that is read here.
+    interval_s : float, optional
+        Sample interval to use whatever the headers say, seconds.
+
+    Returns
+    -------
+    list of ShotRecord
+        File by file, in the order of each. Record numbers are those of the files: they may repeat between files
+        (a survey makes them unique).
+
+    Raises
+    ------
+    InputError
+        If a file cannot be used; nothing is returned then.
+    """
+    return read_records_and_findings(paths, interval_s)[0]

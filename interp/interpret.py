@@ -1,0 +1,246 @@
+"""From a PickTable to a DepthSection: the whole interpretation in one call."""
+
+from __future__ import annotations
+
+import dataclasses
+from collections.abc import Callable
+from dataclasses import dataclass
+from itertools import product
+
+import numpy as np
+import numpy.typing as npt
+
+from interp.line import Line, lay_out_line
+from interp.refractor import Observations, Problem, Roughness, Solution, lay_ground, solve
+from interp.section import DepthSection, PickFit
+from interp.spread import Ensemble, branch_probability, draw, weigh_roughness
+from interp.start import flat_start
+from picker.picks import PickTable
+
+FloatArray = npt.NDArray[np.float64]
+IntArray = npt.NDArray[np.int64]
+
+HIGHEST_CONFIDENCE = 0.995  # nobody's pick is certain to be on the right phase
+LEAST_SIGMA_S = 2e-5  # below this the errors of the forward model would count
+FASTEST_M_S = 6500.0  # refractor velocity assumed where none was seen: the fast end of sound rock
+
+
+@dataclass(frozen=True)
+class InterpretSettings:
+    """What a person may choose.
+
+    Parameters
+    ----------
+    seed : int
+        Seed of all random draws; the same seed gives the same result.
+    draws : int
+        Joint draws of depths and velocities.
+    upper_roughness, lower_roughness, delay_roughness : tuple of float
+        Relative changes along the line that are weighed against each other: overburden velocity, refractor
+        velocity, departure of the delay time from its trend.
+    """
+
+    seed: int = 1
+    draws: int = 1000
+    upper_roughness: tuple[float, ...] = (0.01, 0.06, 0.15)
+    lower_roughness: tuple[float, ...] = (0.005, 0.06)
+    delay_roughness: tuple[float, ...] = (0.03, 0.1, 0.25, 0.5)
+    correlation_spacings: tuple[float, ...] = (4.0, 10.0)
+
+
+def interpret(
+    picks: PickTable,
+    settings: InterpretSettings = InterpretSettings(),  # noqa: B008  (frozen, so sharing it is safe)
+    progress: Callable[[int, int], None] | None = None,
+) -> DepthSection:
+    """Depth to the refractor under every geophone and the layer velocities, with joint draws.
+
+    Parameters
+    ----------
+    picks : PickTable
+        Picks in state `kept` are used.
+    settings : InterpretSettings
+    progress : callable of (done, all), optional
+        Called as draws are made.
+
+    Returns
+    -------
+    DepthSection
+
+    Raises
+    ------
+    ValueError
+        If the picks cannot carry a two-layer solution; the text says what is missing.
+    """
+    used = _usable(picks)
+    line = lay_out_line(used)
+    warnings = []
+    if np.any(line.broadside):
+        warnings.append(
+            f"{int(line.broadside.sum())} picks run across the line rather than along it and were not used."
+        )
+        used = take(used, ~line.broadside)
+        line = lay_out_line(used)
+    problem = _problem(used, line)
+    middle = Roughness(0.06, 0.02, 0.15, settings.correlation_spacings[-1] * _spacing(line))
+    best = solve(problem, middle)
+    error_scale, note = _error_scale(problem, best)
+    if note:
+        warnings.append(note)
+    choices = tuple(
+        Roughness(upper, lower, delay, spacings * _spacing(line))
+        for upper, lower, delay, spacings in product(
+            settings.upper_roughness, settings.lower_roughness, settings.delay_roughness, settings.correlation_spacings
+        )
+    )
+    candidates = weigh_roughness(problem, choices, best, error_scale=error_scale)
+    rng = np.random.default_rng(settings.seed)
+    ensemble = draw(problem, candidates, settings.draws, rng, error_scale=error_scale, progress=progress)
+    top = max(candidates, key=lambda candidate: candidate.probability).solution
+    if not top.converged:
+        warnings.append("The solution had not settled when its steps ran out: look at the travel-time figure.")
+    return _section(problem, used, top, ensemble, error_scale, settings, tuple(warnings))
+
+
+def take(table: PickTable, rows: npt.NDArray[np.bool_] | IntArray) -> PickTable:
+    """The given rows of a table."""
+    return PickTable(**{field.name: getattr(table, field.name)[rows] for field in dataclasses.fields(table)})
+
+
+def _usable(picks: PickTable) -> PickTable:
+    used = take(picks, picks.kept)
+    if len(used) < 4:
+        raise ValueError(f"expected at least four kept picks, found {len(used)}")
+    return used
+
+
+def _spacing(line: Line) -> float:
+    return float(np.median(np.diff(line.station_along_m)))
+
+
+def _problem(used: PickTable, line: Line) -> Problem:
+    records, record_of = np.unique(used.record, return_inverse=True)
+    first = np.array([int(np.flatnonzero(record_of == number)[0]) for number in range(records.size)])
+    stations = line.station_along_m.size
+    static = np.array([used.geophone_sigma_s[line.station_of == number].max() for number in range(stations)])
+    sigma = np.maximum(np.fmax(used.sigma_s, used.reading_sigma_s), LEAST_SIGMA_S)
+    # 5 % and 95 % points of a normal stand 1.645 standard deviations out
+    early = np.where(np.isfinite(used.early_s), (used.time_s - used.early_s) / 1.645, sigma)
+    late = np.where(np.isfinite(used.late_s), (used.late_s - used.time_s) / 1.645, sigma)
+    both = np.sqrt(0.5 * (early**2 + late**2))
+    stretch = np.where(both > 0, sigma / np.where(both > 0, both, 1.0), 1.0)
+    observed = Observations(
+        time_s=used.time_s,
+        sigma_s=sigma,
+        early_sigma_s=np.where(both > 0, early * stretch, sigma),
+        late_sigma_s=np.where(both > 0, late * stretch, sigma),
+        confidence=np.clip(np.nan_to_num(used.confidence, nan=1.0), 0.01, HIGHEST_CONFIDENCE),
+        bias_removed_s=np.nan_to_num(used.bias_removed_s),
+        record_of=np.asarray(record_of).reshape(-1).astype(np.int64),
+        shift_s=np.nan_to_num(used.time_break_shift_s[first]),
+        shift_sigma_s=np.nan_to_num(used.time_break_sigma_s[first]),
+        static_sigma_s=np.nan_to_num(static),
+    )
+    start = flat_start(used.offset_m, used.time_s - np.nan_to_num(used.time_break_shift_s), sigma)
+    return Problem(line, lay_ground(line), observed, start)
+
+
+def _error_scale(problem: Problem, solution: Solution) -> tuple[float, str]:
+    """Factor on stated errors when the picks scatter more than they allow, and the sentence that says so."""
+    predicted = np.where(solution.head, solution.at.head_s, solution.at.direct_s)
+    residual = (problem.observed.time_s - predicted) / problem.observed.sigma_s
+    weight = solution.weight
+    freedom = float(weight.sum()) - _effective_unknowns(problem, solution)
+    if freedom < 5:
+        return 1.0, "Too few picks to test the stated pick errors against their scatter."
+    chi2 = float(np.sum(weight * residual**2)) / freedom
+    if chi2 < 1 + 2.5 * np.sqrt(2 / freedom):
+        return 1.0, ""
+    scale = float(np.sqrt(chi2))
+    return scale, (
+        f"The picks scatter {scale:.2f} times as much about the result as their stated errors allow; all pick errors "
+        "were multiplied by that factor. Wrong picks, a third layer or a velocity that grows with depth can cause it."
+    )
+
+
+def _effective_unknowns(problem: Problem, solution: Solution) -> float:
+    """Number of unknowns that the picks decide, roughly: places and shots with data, and the velocities."""
+    head = solution.head
+    stations = np.unique(problem.line.station_of[head]).size
+    shots = np.unique(problem.observed.record_of).size
+    return min(0.5 * problem.observed.time_s.size, 2.0 + 0.5 * stations + 0.5 * shots)
+
+
+def _section(
+    problem: Problem,
+    used: PickTable,
+    top: Solution,
+    ensemble: Ensemble,
+    error_scale: float,
+    settings: InterpretSettings,
+    warnings: tuple[str, ...],
+) -> DepthSection:
+    line, ground, observed = problem.line, problem.ground, problem.observed
+    node = ground.station_node
+    along = ensemble.along
+    depth = along.depth_m[:, None, node].copy()
+    velocity = 1 / np.stack([along.upper_s_m[:, node], along.lower_s_m[:, node]], axis=1)
+    probability = branch_probability(ensemble)
+    head = probability >= 0.5
+    stations = line.station_along_m.size
+    believed = head & (top.weight > 0.5)
+    coverage, counts = _coverage(line, believed)
+    note = np.full((1, stations), "", dtype=object)
+    deeper = np.full((1, stations), np.nan)
+    predicted = np.median(ensemble.predicted_s, axis=0)
+    residual = used.time_s - predicted
+    weight = top.weight
+    chi2 = float(np.sum(weight * (residual / observed.sigma_s) ** 2) / weight.sum())
+    rms = float(np.sqrt(np.sum(weight * residual**2) / weight.sum()))
+    columns = problem.columns
+    shifts = ensemble.unknowns[:, columns.shift]
+    records = np.unique(used.record)
+    del error_scale, deeper
+    return DepthSection(
+        station_xyz=line.station_xyz,
+        along_m=line.station_along_m,
+        depth_samples_m=depth,
+        velocity_samples_m_s=velocity,
+        bound_shallow_m=np.full((1, stations), np.nan),
+        bound_deep_m=np.full((1, stations), np.nan),
+        coverage=coverage[None, :],
+        deeper_than_m=np.full((1, stations), np.nan),
+        picks=counts[None, :],
+        note=note.astype(np.str_),
+        fit=PickFit(
+            record=used.record,
+            channel=used.channel,
+            source_along_m=line.shot_along_m[line.shot_of],
+            receiver_along_m=line.station_along_m[line.station_of],
+            offset_m=used.offset_m,
+            time_s=used.time_s,
+            sigma_s=observed.sigma_s,
+            predicted_s=predicted,
+            branch=head.astype(np.int64),
+            branch_probability=np.where(head, probability, 1 - probability),
+            weight=weight,
+        ),
+        rms_misfit_s=rms,
+        chi2_per_pick=chi2,
+        refractor_probability={1: 1.0},
+        shot_shift_s={
+            int(record): (float(np.median(shifts[:, row])), float(np.std(shifts[:, row])))
+            for row, record in enumerate(records)
+        },
+        warnings=warnings,
+        settings=dataclasses.asdict(settings),
+    )
+
+
+def _coverage(line: Line, believed: npt.NDArray[np.bool_]) -> tuple[npt.NDArray[np.str_], IntArray]:
+    stations = line.station_along_m.size
+    right_going = line.shot_along_m[line.shot_of] < line.station_along_m[line.station_of]
+    from_left = np.bincount(line.station_of[believed & right_going], minlength=stations)
+    from_right = np.bincount(line.station_of[believed & ~right_going], minlength=stations)
+    sides = (from_left > 0).astype(int) + (from_right > 0)
+    return np.array(["none", "one", "two"])[sides], (from_left + from_right).astype(np.int64)

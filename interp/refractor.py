@@ -1,0 +1,421 @@
+"""Delay times of one refractor by generalised least squares over all shots at once (time-term solution).
+
+Unknowns: slowness of the overburden and of the refractor along the line, the delay time along the line, one
+time-break shift a record, one static a geophone place, one common factor on the late bias that was removed.
+Times are predicted exactly, by Fermat's principle over the curved refractor and the relief (`interp.fermat`);
+the step from residual to unknowns uses the delay-time relation t = delay(shot foot) + delay(receiver foot) +
+integral of refractor slowness, with both feet where the exact path left them (offset by the slanted ray). The
+fixed point of the two is the solution of the exact problem to second order in dip.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from interp.fermat import two_layer_arrivals
+from interp.line import Line
+
+FloatArray = npt.NDArray[np.float64]
+IntArray = npt.NDArray[np.int64]
+BoolArray = npt.NDArray[np.bool_]
+
+MIN_DEPTH_M = 0.05  # a refractor nearer than this cannot be told from the ground
+NODES_PER_KNOT = 4
+MAX_NODES = 700
+MAX_DELAY_KNOTS = 140
+VELOCITY_KNOTS = 12
+DIP_SIGMA = 0.18  # prior standard deviation of the overall slope of the refractor: tan 10 degrees
+BIAS_SIGMA = 0.3  # remaining error of a removed late bias, as a share of it
+SETTLED = 0.05  # a step that moves no prediction by more than this share of its error is the last
+WILD_WINDOW_S = 0.05  # a pick on the wrong phase lies anywhere within this of the right one
+
+
+@dataclass(frozen=True)
+class Roughness:
+    """How much the ground may change along the line: prior standard deviations and one length.
+
+    `upper` and `lower` are relative changes of the overburden and refractor velocity, `delay` is the relative
+    departure of the delay time from its trend, `length_m` the distance over which that departure forgets itself
+    (Matern 3/2 covariance).
+    """
+
+    upper: float
+    lower: float
+    delay: float
+    length_m: float
+
+
+@dataclass(frozen=True)
+class Start:
+    """A flat two-layer ground to start from: velocities in m/s, delay time at one end in seconds."""
+
+    upper_m_s: float
+    lower_m_s: float
+    delay_s: float
+
+
+@dataclass(frozen=True, eq=False)
+class Observations:
+    """The picks as the inversion sees them; arrays of shape (picks,), seconds.
+
+    `record_of` is the row of the pick's record in `shift_s` and `shift_sigma_s` (records,); `static_sigma_s`
+    has shape (stations,).
+    """
+
+    time_s: FloatArray
+    sigma_s: FloatArray
+    early_sigma_s: FloatArray
+    late_sigma_s: FloatArray
+    confidence: FloatArray
+    bias_removed_s: FloatArray
+    record_of: IntArray
+    shift_s: FloatArray
+    shift_sigma_s: FloatArray
+    static_sigma_s: FloatArray
+
+
+@dataclass(frozen=True, eq=False)
+class Ground:
+    """The line cut into nodes, and what each unknown along the line does at every node.
+
+    `upper_at`, `lower_at`, `delay_at` (nodes, knots) interpolate knots to nodes; `trend` (nodes, 3) are the
+    constant, the slope and the relief; `node_x_m` and `surface_z_m` (nodes,).
+    """
+
+    node_x_m: FloatArray
+    surface_z_m: FloatArray
+    upper_x_m: FloatArray
+    lower_x_m: FloatArray
+    delay_x_m: FloatArray
+    upper_at: FloatArray
+    lower_at: FloatArray
+    delay_at: FloatArray
+    trend: FloatArray
+    station_node: IntArray
+    shot_node: IntArray
+
+
+def lay_ground(line: Line) -> Ground:
+    """Cut the line into nodes that hold every shot and geophone, and set the knots of the unknowns."""
+    places = np.concatenate([line.station_along_m, line.shot_along_m])
+    spacing = float(np.median(np.diff(line.station_along_m)))
+    low, high = float(places.min()), float(places.max())
+    margin = max(2 * spacing, 0.02 * (high - low))
+    low, high = low - margin, high + margin
+    knot_step = max(spacing, (high - low) / MAX_DELAY_KNOTS)
+    delay_x = np.linspace(low, high, int(np.ceil((high - low) / knot_step)) + 1)
+    node_step = max(knot_step / NODES_PER_KNOT, (high - low) / MAX_NODES)
+    regular = np.linspace(low, high, int(np.ceil((high - low) / node_step)) + 1)
+    exact = np.unique(places)
+    crowded = np.min(np.abs(regular[:, None] - exact[None, :]), axis=1) < 0.3 * node_step
+    node_x = np.unique(np.concatenate([regular[~crowded], exact]))
+    surface = line.ground_z_m(node_x)
+    velocity_x = np.linspace(low, high, VELOCITY_KNOTS)
+    half = 0.5 * (high - low)
+    trend = np.stack([np.ones(node_x.size), (node_x - 0.5 * (low + high)) / half, surface - surface.mean()], axis=1)
+    return Ground(
+        node_x_m=node_x,
+        surface_z_m=surface,
+        upper_x_m=velocity_x,
+        lower_x_m=velocity_x,
+        delay_x_m=delay_x,
+        upper_at=_hats(velocity_x, node_x),
+        lower_at=_hats(velocity_x, node_x),
+        delay_at=_hats(delay_x, node_x),
+        trend=trend,
+        station_node=np.searchsorted(node_x, line.station_along_m).astype(np.int64),
+        shot_node=np.searchsorted(node_x, line.shot_along_m).astype(np.int64),
+    )
+
+
+@dataclass(frozen=True)
+class Columns:
+    """Where each kind of unknown stands in the vector of unknowns."""
+
+    upper_mean: int
+    upper: slice
+    lower_mean: int
+    lower: slice
+    trend: slice
+    delay: slice
+    shift: slice
+    static: slice
+    bias: int
+    count: int
+
+
+@dataclass(frozen=True, eq=False)
+class Problem:
+    """Everything that stays fixed while the delay times are solved for."""
+
+    line: Line
+    ground: Ground
+    observed: Observations
+    start: Start
+
+    @property
+    def columns(self) -> Columns:
+        """Layout of the unknowns."""
+        upper = self.ground.upper_x_m.size
+        lower = self.ground.lower_x_m.size
+        delay = self.ground.delay_x_m.size
+        sizes = [1, upper, 1, lower, 3, delay, self.observed.shift_s.size, self.observed.static_sigma_s.size, 1]
+        at = np.concatenate([[0], np.cumsum(sizes)]).tolist()
+        return Columns(
+            upper_mean=at[0],
+            upper=slice(at[1], at[2]),
+            lower_mean=at[2],
+            lower=slice(at[3], at[4]),
+            trend=slice(at[4], at[5]),
+            delay=slice(at[5], at[6]),
+            shift=slice(at[6], at[7]),
+            static=slice(at[7], at[8]),
+            bias=at[8],
+            count=at[9],
+        )
+
+    @property
+    def delay_per_metre_s_m(self) -> float:
+        """Delay time per metre of depth at the start velocities, s/m."""
+        return float(np.sqrt(self.start.upper_m_s**-2 - self.start.lower_m_s**-2))
+
+
+def prior(problem: Problem, rough: Roughness) -> tuple[FloatArray, FloatArray]:
+    """Mean (unknowns,) and factor L (unknowns, unknowns) of the prior: unknowns = mean + L standard normals.
+
+    Slownesses are as good as free (a factor of e either way is one standard deviation for the overburden and
+    for the refractor), the mean delay likewise; the overall slope of the refractor has the standard deviation
+    DIP_SIGMA; whether it follows the relief is left open between not at all and fully.
+    """
+    columns, ground, observed, start = problem.columns, problem.ground, problem.observed, problem.start
+    mean = np.zeros(columns.count)
+    factor = np.zeros((columns.count, columns.count))
+    upper, lower = 1 / start.upper_m_s, 1 / start.lower_m_s
+    per_metre = problem.delay_per_metre_s_m
+    half_m = 0.5 * (ground.node_x_m[-1] - ground.node_x_m[0])
+    mean[columns.upper_mean], factor[columns.upper_mean, columns.upper_mean] = upper, upper
+    mean[columns.lower_mean], factor[columns.lower_mean, columns.lower_mean] = lower, lower
+    correlation_m = max(0.5 * half_m, 4 * (ground.delay_x_m[1] - ground.delay_x_m[0]))
+    factor[columns.upper, columns.upper] = rough.upper * upper * _matern_factor(ground.upper_x_m, correlation_m)
+    factor[columns.lower, columns.lower] = rough.lower * lower * _matern_factor(ground.lower_x_m, correlation_m)
+    first = columns.trend.start
+    mean[first] = start.delay_s
+    mean[first + 2] = 0.5 * per_metre
+    for place, sigma in enumerate((3 * start.delay_s, DIP_SIGMA * half_m * per_metre, 0.5 * per_metre)):
+        factor[first + place, first + place] = sigma
+    factor[columns.delay, columns.delay] = (
+        rough.delay * start.delay_s * _matern_factor(ground.delay_x_m, rough.length_m)
+    )
+    mean[columns.shift] = observed.shift_s
+    factor[columns.shift, columns.shift] = np.diag(observed.shift_sigma_s)
+    factor[columns.static, columns.static] = np.diag(observed.static_sigma_s)
+    factor[columns.bias, columns.bias] = BIAS_SIGMA
+    return mean, factor
+
+
+@dataclass(frozen=True, eq=False)
+class Profiles:
+    """Slownesses (s/m), delay time (s) and depth (m) at nodes; last axis nodes."""
+
+    upper_s_m: FloatArray
+    lower_s_m: FloatArray
+    delay_s: FloatArray
+    depth_m: FloatArray
+
+
+def profiles(problem: Problem, unknowns: FloatArray) -> Profiles:
+    """Profiles along the line of one vector of unknowns, or of many (draws, unknowns).
+
+    Depth is delay / sqrt(upper**2 - lower**2), never less than MIN_DEPTH_M.
+    """
+    columns, ground = problem.columns, problem.ground
+    upper = unknowns[..., columns.upper_mean, None] + unknowns[..., columns.upper] @ ground.upper_at.T
+    lower = unknowns[..., columns.lower_mean, None] + unknowns[..., columns.lower] @ ground.lower_at.T
+    delay = unknowns[..., columns.trend] @ ground.trend.T + unknowns[..., columns.delay] @ ground.delay_at.T
+    upper = np.maximum(upper, 1e-5)
+    lower = np.clip(lower, 1e-5, 0.98 * upper)
+    depth = np.maximum(delay / np.sqrt(upper**2 - lower**2), MIN_DEPTH_M)
+    return Profiles(upper, lower, delay, depth)
+
+
+@dataclass(frozen=True, eq=False)
+class Linearised:
+    """Predictions of both branches on the record's clock at one state, and how they change.
+
+    `direct_s`, `head_s` (picks,); `direct_by`, `head_by` (picks, unknowns).
+    """
+
+    direct_s: FloatArray
+    head_s: FloatArray
+    direct_by: FloatArray
+    head_by: FloatArray
+
+    def moved(self, step: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Both branches after a step of the unknowns, (unknowns,) or (draws, unknowns)."""
+        return self.direct_s + step @ self.direct_by.T, self.head_s + step @ self.head_by.T
+
+
+def linearise(problem: Problem, unknowns: FloatArray) -> Linearised:
+    """Exact predictions of both branches at `unknowns` (unknowns,) with the delay-time derivatives."""
+    columns, ground, line, observed = problem.columns, problem.ground, problem.line, problem.observed
+    at = profiles(problem, unknowns)
+    shot = ground.shot_node[line.shot_of]
+    receiver = ground.station_node[line.station_of]
+    arrivals = two_layer_arrivals(
+        ground.node_x_m, ground.surface_z_m, ground.surface_z_m - at.depth_m, at.upper_s_m, at.lower_s_m, shot, receiver
+    )
+    run = np.abs(ground.node_x_m[receiver] - ground.node_x_m[shot])
+    extra = (line.stretch - 1) * run
+    direct = arrivals.direct_s * line.stretch
+    head = arrivals.head_s + extra * unknowns[columns.lower_mean]
+    upper_path = _path_integral(ground.node_x_m, ground.upper_at, shot, receiver)
+    flat_direct = upper_path @ unknowns[columns.upper] + run * unknowns[columns.upper_mean]
+    with np.errstate(invalid="ignore", divide="ignore"):
+        lengthening = np.where(flat_direct > 0, direct / flat_direct, 1.0)
+    shared = np.zeros((observed.time_s.size, columns.count))
+    rows = np.arange(observed.time_s.size)
+    shared[rows, columns.shift.start + observed.record_of] = 1
+    shared[rows, columns.static.start + line.station_of] = 1
+    shared[:, columns.bias] = observed.bias_removed_s
+    direct_by, head_by = shared.copy(), shared
+    direct_by[:, columns.upper_mean] = run * lengthening
+    direct_by[:, columns.upper] = upper_path * lengthening[:, None]
+    head_by[:, columns.lower_mean] = run * line.stretch
+    head_by[:, columns.lower] = _path_integral(ground.node_x_m, ground.lower_at, shot, receiver)
+    feet = (arrivals.shot_foot, arrivals.receiver_foot)
+    head_by[:, columns.trend] = sum(ground.trend[foot] for foot in feet)
+    head_by[:, columns.delay] = sum(ground.delay_at[foot] for foot in feet)
+    common = (
+        unknowns[columns.shift][observed.record_of]
+        + unknowns[columns.static][line.station_of]
+        + unknowns[columns.bias] * observed.bias_removed_s
+    )
+    return Linearised(direct + common, head + common, direct_by, head_by)
+
+
+@dataclass(frozen=True, eq=False)
+class Solution:
+    """Most probable ground for one Roughness.
+
+    Parameters
+    ----------
+    unknowns : float (unknowns,)
+    at : Linearised
+        Exact predictions there.
+    head : bool (picks,)
+        True where the head wave is predicted first.
+    weight : float (picks,)
+        Probability that the pick is on the right phase, given its residual.
+    log_evidence : float
+        Log marginal likelihood of the picks (Laplace), natural units.
+    converged : bool
+        Whether predictions stopped changing.
+    """
+
+    unknowns: FloatArray
+    at: Linearised
+    head: BoolArray
+    weight: FloatArray
+    log_evidence: float
+    converged: bool
+
+
+def solve(
+    problem: Problem,
+    rough: Roughness,
+    *,
+    error_scale: float = 1.0,
+    refractor: bool = True,
+    unknowns: FloatArray | None = None,
+    iterations: int = 20,
+) -> Solution:
+    """Most probable delay times, velocities and shifts: Gauss-Newton on exact first arrivals.
+
+    Parameters
+    ----------
+    problem : Problem
+    rough : Roughness
+    error_scale : float
+        Factor on all stated pick errors.
+    refractor : bool
+        False for a ground without refractor: every first arrival is the direct wave.
+    unknowns : float (unknowns,), optional
+        Where to start; the prior mean unless given.
+    iterations : int
+        Most steps taken.
+
+    Returns
+    -------
+    Solution
+        Converged when no prediction moved by more than SETTLED of its error in the last step.
+    """
+    mean, factor = prior(problem, rough)
+    state = mean if unknowns is None else unknowns
+    sigma = error_scale * problem.observed.sigma_s
+    at = linearise(problem, state)
+    converged = False
+    for step in range(iterations):
+        head = (at.head_s < at.direct_s) & refractor
+        predicted = np.where(head, at.head_s, at.direct_s)
+        slope = np.where(head[:, None], at.head_by, at.direct_by)
+        residual = problem.observed.time_s - predicted
+        # a broad error at first, so that a poor start does not make good picks look wild
+        weight = right_phase(residual, sigma * max(1.0, 8.0 / 2**step), problem.observed.confidence)
+        target = residual + slope @ (state - mean)
+        whitened = (slope @ factor) * (np.sqrt(weight) / sigma)[:, None]
+        normal = np.eye(mean.size) + whitened.T @ whitened
+        solved = mean + factor @ np.linalg.solve(normal, whitened.T @ (target * np.sqrt(weight) / sigma))
+        move = solved - state
+        shift = np.abs(slope @ move) / sigma
+        state = state + move * (1.0 if step < 8 else 0.6)
+        at = linearise(problem, state)
+        if step > 3 and float(shift.max()) < SETTLED:
+            converged = True
+            break
+    head = (at.head_s < at.direct_s) & refractor
+    residual = problem.observed.time_s - np.where(head, at.head_s, at.direct_s)
+    weight = right_phase(residual, sigma, problem.observed.confidence)
+    slope = np.where(head[:, None], at.head_by, at.direct_by)
+    whitened = (slope @ factor) * (np.sqrt(weight) / sigma)[:, None]
+    normal = np.eye(mean.size) + whitened.T @ whitened
+    standard = np.linalg.lstsq(factor, state - mean, rcond=None)[0]
+    evidence = (
+        float(np.sum(log_mixture(residual, sigma, problem.observed.confidence)))
+        - 0.5 * float(standard @ standard)
+        - 0.5 * float(np.linalg.slogdet(normal)[1])
+    )
+    return Solution(state, at, head, weight, evidence, converged)
+
+
+def log_mixture(residual_s: FloatArray, sigma_s: FloatArray, confidence: FloatArray) -> FloatArray:
+    """Log density of residuals: normal with probability `confidence`, else anywhere in WILD_WINDOW_S."""
+    good = confidence * np.exp(-0.5 * (residual_s / sigma_s) ** 2) / (np.sqrt(2 * np.pi) * sigma_s)
+    return np.asarray(np.log(good + (1 - confidence) / (2 * WILD_WINDOW_S)))
+
+
+def right_phase(residual_s: FloatArray, sigma_s: FloatArray, confidence: FloatArray) -> FloatArray:
+    """Probability that each pick is on the right phase, given its residual (two-component mixture)."""
+    good = confidence * np.exp(-0.5 * (residual_s / sigma_s) ** 2) / (np.sqrt(2 * np.pi) * sigma_s)
+    return np.asarray(good / (good + (1 - confidence) / (2 * WILD_WINDOW_S)))
+
+
+def _hats(knots: FloatArray, x: FloatArray) -> FloatArray:
+    """Linear interpolation from knots to x as a matrix (x, knots)."""
+    return np.stack([np.interp(x, knots, row) for row in np.eye(knots.size)], axis=1)
+
+
+def _matern_factor(x: FloatArray, length_m: float) -> FloatArray:
+    """Lower factor of the Matern 3/2 correlation matrix of points x."""
+    lag = np.sqrt(3.0) * np.abs(x[:, None] - x[None, :]) / length_m
+    correlation = (1 + lag) * np.exp(-lag)
+    return np.asarray(np.linalg.cholesky(correlation + 1e-9 * np.eye(x.size)))
+
+
+def _path_integral(x: FloatArray, values: FloatArray, start: IntArray, stop: IntArray) -> FloatArray:
+    """Integral of each column of values (nodes, columns) along x between two nodes of every path, >= 0."""
+    pieces = 0.5 * (values[1:] + values[:-1]) * np.diff(x)[:, None]
+    total = np.concatenate([np.zeros((1, values.shape[1])), np.cumsum(pieces, axis=0)])
+    return np.asarray(np.abs(total[stop] - total[start]))

@@ -1,0 +1,62 @@
+"""A flat two-layer ground to start from, found by looking at every one on a grid.
+
+No crossover is asked for and no branch assigned beforehand: each candidate predicts the smaller of its two
+branches at every offset, and the sum of capped misfits decides, so that picks on the wrong phase do not steer.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+import numpy.typing as npt
+
+from interp.refractor import Start
+
+FloatArray = npt.NDArray[np.float64]
+
+CAP = 5.0  # misfit beyond this many standard errors says only "wrong", not how wrong
+FLOOR_S = 0.002  # a flat ground cannot be expected to fit closer than this
+MAX_PICKS = 600
+
+
+def flat_start(offset_m: FloatArray, time_s: FloatArray, sigma_s: FloatArray) -> Start:
+    """Flat two-layer ground nearest to the picks.
+
+    Parameters
+    ----------
+    offset_m, time_s, sigma_s : float (picks,)
+        Offsets, first arrivals and their errors. Two picks at least.
+
+    Returns
+    -------
+    Start
+
+    Raises
+    ------
+    ValueError
+        If fewer than three picks, or all at one offset.
+    """
+    if offset_m.size < 3 or np.ptp(offset_m) <= 0:
+        raise ValueError(f"expected at least three picks at different offsets, found {offset_m.size}")
+    stride = max(1, offset_m.size // MAX_PICKS)
+    order = np.argsort(offset_m, kind="stable")[::stride]
+    offset, time = offset_m[order], time_s[order]
+    scale = np.hypot(sigma_s[order], FLOOR_S)
+    apparent = offset / np.maximum(time, 1e-4)
+    usable = apparent[(offset > 0) & (time > 1e-4)]
+    slow, fast = np.quantile(usable, (0.02, 0.98))
+    upper = np.geomspace(max(0.5 * slow, 80.0), min(1.3 * fast, 6000.0), 40)
+    ratio = np.geomspace(1.1, 20.0, 36)
+    intercept = np.linspace(0.0, float(np.max(time)), 60)[1:]
+    best, chosen = np.inf, (0, 0, 0)
+    for i, v1 in enumerate(upper):
+        direct = offset / v1
+        for j, v2 in enumerate(v1 * ratio):
+            if v2 > 8000.0:
+                break
+            head = offset / v2 + intercept[:, None]
+            misfit = np.minimum(np.abs(time - np.minimum(direct, head)) / scale, CAP).sum(axis=1)
+            k = int(np.argmin(misfit))
+            if misfit[k] < best:
+                best, chosen = float(misfit[k]), (i, j, k)
+    i, j, k = chosen
+    return Start(float(upper[i]), float(upper[i] * ratio[j]), float(0.5 * intercept[k]))

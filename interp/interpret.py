@@ -9,7 +9,9 @@ from itertools import product
 
 import numpy as np
 import numpy.typing as npt
+from scipy.special import expit
 
+from interp.control import Control, control_of_stations, least_depth_m
 from interp.line import Line, lay_out_line
 from interp.refractor import Observations, Problem, Roughness, Solution, lay_ground, solve
 from interp.section import DepthSection, PickFit
@@ -19,6 +21,7 @@ from picker.picks import PickTable
 
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
+BoolArray = npt.NDArray[np.bool_]
 
 HIGHEST_CONFIDENCE = 0.995  # nobody's pick is certain to be on the right phase
 LEAST_SIGMA_S = 2e-5  # below this the errors of the forward model would count
@@ -50,7 +53,7 @@ class InterpretSettings:
 
 def interpret(
     picks: PickTable,
-    settings: InterpretSettings = InterpretSettings(),  # noqa: B008  (frozen, so sharing it is safe)
+    settings: InterpretSettings | None = None,
     progress: Callable[[int, int], None] | None = None,
 ) -> DepthSection:
     """Depth to the refractor under every geophone and the layer velocities, with joint draws.
@@ -72,6 +75,7 @@ def interpret(
     ValueError
         If the picks cannot carry a two-layer solution; the text says what is missing.
     """
+    settings = settings or InterpretSettings()
     used = _usable(picks)
     line = lay_out_line(used)
     warnings = []
@@ -87,19 +91,32 @@ def interpret(
     error_scale, note = _error_scale(problem, best)
     if note:
         warnings.append(note)
+    bare = solve(problem, middle, error_scale=error_scale, refractor=False)
+    seen = solve(problem, middle, error_scale=error_scale, unknowns=best.unknowns)
+    seen_probability = float(expit(seen.log_evidence - bare.log_evidence))
     choices = tuple(
         Roughness(upper, lower, delay, spacings * _spacing(line))
         for upper, lower, delay, spacings in product(
             settings.upper_roughness, settings.lower_roughness, settings.delay_roughness, settings.correlation_spacings
         )
     )
-    candidates = weigh_roughness(problem, choices, best, error_scale=error_scale)
+    refractor = seen_probability >= 0.5
+    candidates = weigh_roughness(
+        problem, choices, seen if refractor else bare, error_scale=error_scale, refractor=refractor
+    )
     rng = np.random.default_rng(settings.seed)
-    ensemble = draw(problem, candidates, settings.draws, rng, error_scale=error_scale, progress=progress)
+    ensemble = draw(
+        problem, candidates, settings.draws, rng, error_scale=error_scale, refractor=refractor, progress=progress
+    )
     top = max(candidates, key=lambda candidate: candidate.probability).solution
+    if not refractor:
+        warnings.append(
+            "No refractor was seen: all first arrivals fit the direct wave. The depths that a refractor must exceed "
+            "are given instead."
+        )
     if not top.converged:
         warnings.append("The solution had not settled when its steps ran out: look at the travel-time figure.")
-    return _section(problem, used, top, ensemble, error_scale, settings, tuple(warnings))
+    return _section(problem, used, top, ensemble, settings, seen_probability, tuple(warnings))
 
 
 def take(table: PickTable, rows: npt.NDArray[np.bool_] | IntArray) -> PickTable:
@@ -176,42 +193,47 @@ def _section(
     used: PickTable,
     top: Solution,
     ensemble: Ensemble,
-    error_scale: float,
     settings: InterpretSettings,
+    seen_probability: float,
     warnings: tuple[str, ...],
 ) -> DepthSection:
-    line, ground, observed = problem.line, problem.ground, problem.observed
+    line, ground, observed, columns = problem.line, problem.ground, problem.observed, problem.columns
     node = ground.station_node
-    along = ensemble.along
-    depth = along.depth_m[:, None, node].copy()
-    velocity = 1 / np.stack([along.upper_s_m[:, node], along.lower_s_m[:, node]], axis=1)
     probability = branch_probability(ensemble)
     head = probability >= 0.5
-    stations = line.station_along_m.size
-    believed = head & (top.weight > 0.5)
-    coverage, counts = _coverage(line, believed)
-    note = np.full((1, stations), "", dtype=object)
-    deeper = np.full((1, stations), np.nan)
+    believed = top.weight > 0.5
+    control = control_of_stations(
+        line.station_along_m,
+        line.shot_along_m[line.shot_of],
+        line.station_along_m[line.station_of],
+        ground.node_x_m[top.at.shot_foot],
+        ground.node_x_m[top.at.receiver_foot],
+        head,
+        believed,
+    )
+    depth = ensemble.along.depth_m[:, node].copy()
+    velocity = 1 / np.stack([ensemble.along.upper_s_m[:, node], ensemble.along.lower_s_m[:, node]], axis=1)
+    if seen_probability < 0.5:
+        velocity[:, 1] = np.nan
+    known = (control.coverage != "none") | control.between
+    depth[:, ~known] = np.nan
+    faster = FASTEST_M_S if seen_probability < 0.5 else float(np.median(velocity[:, 1]))
+    deeper = np.where(known, np.nan, least_depth_m(control.reach_m, np.median(velocity[:, 0], axis=0), faster))
     predicted = np.median(ensemble.predicted_s, axis=0)
     residual = used.time_s - predicted
-    weight = top.weight
-    chi2 = float(np.sum(weight * (residual / observed.sigma_s) ** 2) / weight.sum())
-    rms = float(np.sqrt(np.sum(weight * residual**2) / weight.sum()))
-    columns = problem.columns
     shifts = ensemble.unknowns[:, columns.shift]
-    records = np.unique(used.record)
-    del error_scale, deeper
+    stations = line.station_along_m.size
     return DepthSection(
         station_xyz=line.station_xyz,
         along_m=line.station_along_m,
-        depth_samples_m=depth,
+        depth_samples_m=depth[:, None, :],
         velocity_samples_m_s=velocity,
         bound_shallow_m=np.full((1, stations), np.nan),
         bound_deep_m=np.full((1, stations), np.nan),
-        coverage=coverage[None, :],
-        deeper_than_m=np.full((1, stations), np.nan),
-        picks=counts[None, :],
-        note=note.astype(np.str_),
+        coverage=control.coverage[None, :],
+        deeper_than_m=deeper[None, :],
+        picks=control.picks[None, :],
+        note=_notes(control, known, faster)[None, :],
         fit=PickFit(
             record=used.record,
             channel=used.channel,
@@ -223,24 +245,25 @@ def _section(
             predicted_s=predicted,
             branch=head.astype(np.int64),
             branch_probability=np.where(head, probability, 1 - probability),
-            weight=weight,
+            weight=top.weight,
         ),
-        rms_misfit_s=rms,
-        chi2_per_pick=chi2,
-        refractor_probability={1: 1.0},
+        rms_misfit_s=float(np.sqrt(np.sum(top.weight * residual**2) / top.weight.sum())),
+        chi2_per_pick=float(np.sum(top.weight * (residual / observed.sigma_s) ** 2) / top.weight.sum()),
+        refractor_probability={0: 1 - seen_probability, 1: seen_probability},
         shot_shift_s={
             int(record): (float(np.median(shifts[:, row])), float(np.std(shifts[:, row])))
-            for row, record in enumerate(records)
+            for row, record in enumerate(np.unique(used.record))
         },
         warnings=warnings,
         settings=dataclasses.asdict(settings),
     )
 
 
-def _coverage(line: Line, believed: npt.NDArray[np.bool_]) -> tuple[npt.NDArray[np.str_], IntArray]:
-    stations = line.station_along_m.size
-    right_going = line.shot_along_m[line.shot_of] < line.station_along_m[line.station_of]
-    from_left = np.bincount(line.station_of[believed & right_going], minlength=stations)
-    from_right = np.bincount(line.station_of[believed & ~right_going], minlength=stations)
-    sides = (from_left > 0).astype(int) + (from_right > 0)
-    return np.array(["none", "one", "two"])[sides], (from_left + from_right).astype(np.int64)
+def _notes(control: Control, known: BoolArray, faster_m_s: float) -> npt.NDArray[np.str_]:
+    """A sentence for every station that needs one."""
+    notes = np.full(known.size, "", dtype=object)
+    notes[control.coverage == "one"] = "seen from one side only"
+    notes[control.between] = "interpolated between controlled points"
+    notes[~known] = f"no control; a refractor of {faster_m_s:.0f} m/s must be deeper than deeper_than_m"
+    notes[~known & (control.reach_m == 0)] = "no control"
+    return notes.astype(np.str_)

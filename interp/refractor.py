@@ -29,6 +29,7 @@ MAX_DELAY_KNOTS = 140
 VELOCITY_KNOTS = 12
 DIP_SIGMA = 0.18  # prior standard deviation of the overall slope of the refractor: tan 10 degrees
 BIAS_SIGMA = 0.3  # remaining error of a removed late bias, as a share of it
+FREE_STEPS = 8  # steps in which picks may change branch
 SETTLED = 0.05  # a step that moves no prediction by more than this share of its error is the last
 WILD_WINDOW_S = 0.05  # a pick on the wrong phase lies anywhere within this of the right one
 
@@ -245,13 +246,16 @@ def profiles(problem: Problem, unknowns: FloatArray) -> Profiles:
 class Linearised:
     """Predictions of both branches on the record's clock at one state, and how they change.
 
-    `direct_s`, `head_s` (picks,); `direct_by`, `head_by` (picks, unknowns).
+    `direct_s`, `head_s` (picks,); `direct_by`, `head_by` (picks, unknowns); `shot_foot`, `receiver_foot`
+    (picks,) are the nodes where the head wave entered and left the refractor.
     """
 
     direct_s: FloatArray
     head_s: FloatArray
     direct_by: FloatArray
     head_by: FloatArray
+    shot_foot: IntArray
+    receiver_foot: IntArray
 
     def moved(self, step: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Both branches after a step of the unknowns, (unknowns,) or (draws, unknowns)."""
@@ -293,7 +297,7 @@ def linearise(problem: Problem, unknowns: FloatArray) -> Linearised:
         + unknowns[columns.static][line.station_of]
         + unknowns[columns.bias] * observed.bias_removed_s
     )
-    return Linearised(direct + common, head + common, direct_by, head_by)
+    return Linearised(direct + common, head + common, direct_by, head_by, *feet)
 
 
 @dataclass(frozen=True, eq=False)
@@ -357,8 +361,10 @@ def solve(
     sigma = error_scale * problem.observed.sigma_s
     at = linearise(problem, state)
     converged = False
+    head = (at.head_s < at.direct_s) & refractor
     for step in range(iterations):
-        head = (at.head_s < at.direct_s) & refractor
+        if step < FREE_STEPS:  # later, a pick that lies on the crossover would hop from branch to branch for ever
+            head = (at.head_s < at.direct_s) & refractor
         predicted = np.where(head, at.head_s, at.direct_s)
         slope = np.where(head[:, None], at.head_by, at.direct_by)
         residual = problem.observed.time_s - predicted
@@ -370,7 +376,7 @@ def solve(
         solved = mean + factor @ np.linalg.solve(normal, whitened.T @ (target * np.sqrt(weight) / sigma))
         move = solved - state
         shift = np.abs(slope @ move) / sigma
-        state = state + move * (1.0 if step < 8 else 0.6)
+        state = state + move * (1.0 if step < FREE_STEPS else 0.6)
         at = linearise(problem, state)
         if step > 3 and float(shift.max()) < SETTLED:
             converged = True

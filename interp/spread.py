@@ -19,6 +19,7 @@ from interp.refractor import Problem, Profiles, Roughness, Solution, prior, prof
 FloatArray = npt.NDArray[np.float64]
 
 BRANCH_ROUNDS = 4
+WARM_STEPS = 12  # steps of a solution that starts from a near one
 LEAST_WEIGHT = 0.01  # a roughness less probable than this is not drawn
 
 
@@ -47,6 +48,7 @@ def weigh_roughness(
     best: Solution,
     *,
     error_scale: float,
+    refractor: bool = True,
     progress: Callable[[int, int], None] | None = None,
 ) -> tuple[Candidate, ...]:
     """Posterior probability of each roughness: evidence of its own solution, uniform prior over the choices.
@@ -59,6 +61,8 @@ def weigh_roughness(
         Where every solution starts.
     error_scale : float
         Factor on all stated pick errors.
+    refractor : bool
+        False for a ground without refractor: every first arrival is the direct wave.
     progress : callable of (done, all), optional
 
     Returns
@@ -67,7 +71,16 @@ def weigh_roughness(
     """
     solutions = []
     for done, rough in enumerate(choices):
-        solutions.append(solve(problem, rough, error_scale=error_scale, unknowns=best.unknowns, iterations=8))
+        solutions.append(
+            solve(
+                problem,
+                rough,
+                error_scale=error_scale,
+                refractor=refractor,
+                unknowns=best.unknowns,
+                iterations=WARM_STEPS,
+            )
+        )
         if progress is not None:
             progress(done + 1, len(choices))
     evidence = np.array([solution.log_evidence for solution in solutions])
@@ -89,6 +102,7 @@ def draw(
     rng: np.random.Generator,
     *,
     error_scale: float,
+    refractor: bool = True,
     progress: Callable[[int, int], None] | None = None,
 ) -> Ensemble:
     """Joint draws of all unknowns.
@@ -104,6 +118,8 @@ def draw(
     rng : numpy Generator
     error_scale : float
         Factor on all stated pick errors.
+    refractor : bool
+        False for a ground without refractor: every first arrival is the direct wave.
     progress : callable of (done, all), optional
 
     Returns
@@ -116,7 +132,7 @@ def draw(
     for number, candidate in enumerate(candidates):
         mean, factor = prior(problem, candidate.rough)
         for _ in range(int(np.sum(of_candidate == number))):
-            state, head, predicted = _one_draw(problem, candidate.solution, mean, factor, rng, error_scale)
+            state, head, predicted = _one_draw(problem, candidate.solution, mean, factor, rng, error_scale, refractor)
             unknowns.append(state)
             heads.append(head)
             predictions.append(predicted)
@@ -133,6 +149,7 @@ def _one_draw(
     factor: FloatArray,
     rng: np.random.Generator,
     error_scale: float,
+    refractor: bool,
 ) -> tuple[FloatArray, npt.NDArray[np.bool_], FloatArray]:
     """One draw of the unknowns, the branch of every pick in it and the predicted times."""
     observed, at = problem.observed, solution.at
@@ -150,11 +167,11 @@ def _one_draw(
         normal = np.eye(mean.size) + whitened.T @ whitened
         state = mean + factor @ np.linalg.solve(normal, whitened.T @ (target * root_weight) + moved_prior)
         direct_s, head_s = at.moved(state - solution.unknowns)
-        again = head_s < direct_s
+        again = (head_s < direct_s) & refractor
         if np.array_equal(again, head):
             break
         head = again
-    return state, again, np.minimum(direct_s, head_s)
+    return state, again, np.where(again, head_s, direct_s)
 
 
 def branch_probability(ensemble: Ensemble) -> FloatArray:

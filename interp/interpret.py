@@ -25,6 +25,10 @@ BoolArray = npt.NDArray[np.bool_]
 
 HIGHEST_CONFIDENCE = 0.995  # nobody's pick is certain to be on the right phase
 LEAST_SIGMA_S = 2e-5  # below this the errors of the forward model would count
+LEAST_HEAD = 3  # fewer head waves than this are taken for chance
+LEAST_DIRECT = 3  # fewer direct arrivals than this do not measure the overburden
+UNSEEN_UPPER_M_S = 600.0  # middle of the range of dry soils and weathered ground
+UNSEEN_UPPER_SIGMA = 0.3  # relative standard deviation of its slowness: 375 to 1,500 m/s within two of them
 FASTEST_M_S = 6500.0  # refractor velocity assumed where none was seen: the fast end of sound rock
 
 
@@ -46,7 +50,7 @@ class InterpretSettings:
     seed: int = 1
     draws: int = 1000
     upper_roughness: tuple[float, ...] = (0.01, 0.06, 0.15)
-    lower_roughness: tuple[float, ...] = (0.005, 0.06)
+    lower_roughness: tuple[float, ...] = (0.005, 0.05, 0.15)
     delay_roughness: tuple[float, ...] = (0.03, 0.1, 0.25, 0.5)
     correlation_spacings: tuple[float, ...] = (4.0, 10.0)
 
@@ -87,23 +91,28 @@ def interpret(
         line = lay_out_line(used)
     problem = _problem(used, line)
     middle = Roughness(0.06, 0.02, 0.15, settings.correlation_spacings[-1] * _spacing(line))
-    best = solve(problem, middle)
+    seen, bare = solve(problem, middle), solve(problem, middle, refractor=False)
+    seen_probability = _seen_probability(seen, bare)
+    refractor = seen_probability > 0.5
+    best = seen if refractor else bare
+    if refractor and _believed_direct(best) < LEAST_DIRECT:
+        problem = dataclasses.replace(problem, start=dataclasses.replace(problem.start, upper_m_s=UNSEEN_UPPER_M_S))
+        problem = dataclasses.replace(problem, upper_prior=UNSEEN_UPPER_SIGMA)
+        best = solve(problem, middle)
+        warnings.append(
+            f"Fewer than {LEAST_DIRECT} direct arrivals: the overburden velocity is not measured but assumed "
+            f"({UNSEEN_UPPER_M_S:.0f} m/s, give or take {100 * UNSEEN_UPPER_SIGMA:.0f} %), and the depths rest on it."
+        )
     error_scale, note = _error_scale(problem, best)
     if note:
         warnings.append(note)
-    bare = solve(problem, middle, error_scale=error_scale, refractor=False)
-    seen = solve(problem, middle, error_scale=error_scale, unknowns=best.unknowns)
-    seen_probability = float(expit(seen.log_evidence - bare.log_evidence))
     choices = tuple(
         Roughness(upper, lower, delay, spacings * _spacing(line))
         for upper, lower, delay, spacings in product(
             settings.upper_roughness, settings.lower_roughness, settings.delay_roughness, settings.correlation_spacings
         )
     )
-    refractor = seen_probability >= 0.5
-    candidates = weigh_roughness(
-        problem, choices, seen if refractor else bare, error_scale=error_scale, refractor=refractor
-    )
+    candidates = weigh_roughness(problem, choices, best, error_scale=error_scale, refractor=refractor)
     rng = np.random.default_rng(settings.seed)
     ensemble = draw(
         problem, candidates, settings.draws, rng, error_scale=error_scale, refractor=refractor, progress=progress
@@ -113,6 +122,11 @@ def interpret(
         warnings.append(
             "No refractor was seen: all first arrivals fit the direct wave. The depths that a refractor must exceed "
             "are given instead."
+        )
+    elif _one_sided(line, top):
+        warnings.append(
+            "All head waves ran in one direction: the dip of the refractor is unknown, and its velocity and depth are "
+            "only as good as the assumption that it slopes by less than about ten degrees."
         )
     if not top.converged:
         warnings.append("The solution had not settled when its steps ran out: look at the travel-time figure.")
@@ -133,6 +147,23 @@ def _usable(picks: PickTable) -> PickTable:
 
 def _spacing(line: Line) -> float:
     return float(np.median(np.diff(line.station_along_m)))
+
+
+def _one_sided(line: Line, solution: Solution) -> bool:
+    used = solution.head & (solution.weight > 0.5)
+    rightward = line.shot_along_m[line.shot_of] < line.station_along_m[line.station_of]
+    return bool(np.all(rightward[used]) or not np.any(rightward[used]))
+
+
+def _believed_direct(solution: Solution) -> int:
+    return int(np.sum(~solution.head & (solution.weight > 0.5)))
+
+
+def _seen_probability(seen: Solution, bare: Solution) -> float:
+    """Probability that a refractor gave first arrivals, from the evidence with and without one."""
+    if np.sum(seen.head & (seen.weight > 0.5)) < LEAST_HEAD:
+        return 0.0
+    return float(expit(seen.log_evidence - bare.log_evidence))
 
 
 def _problem(used: PickTable, line: Line) -> Problem:

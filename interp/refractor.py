@@ -150,12 +150,17 @@ class Columns:
 
 @dataclass(frozen=True, eq=False)
 class Problem:
-    """Everything that stays fixed while the delay times are solved for."""
+    """Everything that stays fixed while the delay times are solved for.
+
+    `upper_prior` is the prior standard deviation of the overburden slowness relative to its start: 1 where
+    direct arrivals measure it.
+    """
 
     line: Line
     ground: Ground
     observed: Observations
     start: Start
+    upper_prior: float = 1.0
 
     @property
     def columns(self) -> Columns:
@@ -187,8 +192,8 @@ class Problem:
 def prior(problem: Problem, rough: Roughness) -> tuple[FloatArray, FloatArray]:
     """Mean (unknowns,) and factor L (unknowns, unknowns) of the prior: unknowns = mean + L standard normals.
 
-    Slownesses are as good as free (a factor of e either way is one standard deviation for the overburden and
-    for the refractor), the mean delay likewise; the overall slope of the refractor has the standard deviation
+    Slownesses are as good as free (one standard deviation is as large as the value itself), the mean delay
+    likewise; the overall slope of the refractor has the standard deviation
     DIP_SIGMA; whether it follows the relief is left open between not at all and fully.
     """
     columns, ground, observed, start = problem.columns, problem.ground, problem.observed, problem.start
@@ -197,7 +202,7 @@ def prior(problem: Problem, rough: Roughness) -> tuple[FloatArray, FloatArray]:
     upper, lower = 1 / start.upper_m_s, 1 / start.lower_m_s
     per_metre = problem.delay_per_metre_s_m
     half_m = 0.5 * (ground.node_x_m[-1] - ground.node_x_m[0])
-    mean[columns.upper_mean], factor[columns.upper_mean, columns.upper_mean] = upper, upper
+    mean[columns.upper_mean], factor[columns.upper_mean, columns.upper_mean] = upper, problem.upper_prior * upper
     mean[columns.lower_mean], factor[columns.lower_mean, columns.lower_mean] = lower, lower
     correlation_m = max(0.5 * half_m, 4 * (ground.delay_x_m[1] - ground.delay_x_m[0]))
     factor[columns.upper, columns.upper] = rough.upper * upper * _matern_factor(ground.upper_x_m, correlation_m)

@@ -19,6 +19,9 @@ from interp.refractor import Problem, Profiles, Roughness, Solution, prior, prof
 FloatArray = npt.NDArray[np.float64]
 
 BRANCH_ROUNDS = 4
+MOST_TRIES = 20  # draws of an impossible ground are drawn again this often
+SLOWEST_M_S = 80.0  # loosest dry topsoil (common practice, no source)
+FASTEST_M_S = 7500.0  # faster than rock near the ground is
 WARM_STEPS = 12  # steps of a solution that starts from a near one
 LEAST_WEIGHT = 0.01  # a roughness less probable than this is not drawn
 
@@ -132,7 +135,12 @@ def draw(
     for number, candidate in enumerate(candidates):
         mean, factor = prior(problem, candidate.rough)
         for _ in range(int(np.sum(of_candidate == number))):
-            state, head, predicted = _one_draw(problem, candidate.solution, mean, factor, rng, error_scale, refractor)
+            for _try in range(MOST_TRIES):
+                state, head, predicted = _one_draw(
+                    problem, candidate.solution, mean, factor, rng, error_scale, refractor
+                )
+                if _possible(problem, state, refractor):
+                    break
             unknowns.append(state)
             heads.append(head)
             predictions.append(predicted)
@@ -172,6 +180,15 @@ def _one_draw(
             break
         head = again
     return state, again, np.where(again, head_s, direct_s)
+
+
+def _possible(problem: Problem, state: FloatArray, refractor: bool) -> bool:
+    """Whether a draw is a ground that can exist: velocities of earth materials, the refractor the faster."""
+    columns = problem.columns
+    upper, lower = state[columns.upper_mean], state[columns.lower_mean]
+    if not SLOWEST_M_S < 1 / upper < FASTEST_M_S:
+        return False
+    return not refractor or (0 < lower < upper and 1 / lower < FASTEST_M_S)
 
 
 def branch_probability(ensemble: Ensemble) -> FloatArray:

@@ -12,8 +12,9 @@ import numpy.typing as npt
 from scipy.special import expit
 
 from interp.control import Control, control_of_stations, least_depth_m
+from interp.ground import lay_ground
 from interp.line import Line, lay_out_line
-from interp.refractor import Observations, Problem, Roughness, Solution, lay_ground, solve
+from interp.refractor import Observations, Problem, Roughness, Solution, solve
 from interp.section import DepthSection, PickFit
 from interp.spread import Ensemble, branch_probability, draw, weigh_roughness
 from interp.start import flat_start

@@ -293,7 +293,7 @@ def trace_positions(
 
 
 def _own_count(mapped: mmap.mmap, position: int, header: FileHeader) -> int:
-    """Count the samples of the trace that begins at a byte, after its own header, or the file header where that has none."""
+    """Count the samples of the trace at a byte after its own header, or after the file header where that has none."""
     first, width = TRACE_WORDS["samples"]
     (count,) = struct.unpack_from(header.order + width.replace("u2", "H"), mapped, position + first)
     # 65535 is the most that the trace header can hold; longer traces have their count in the file header only

@@ -72,6 +72,8 @@ class PicksFile:
 
     Parameters
     ----------
+    path : Path
+        The file.
     table : PickTable
         The picks.
     findings : tuple of Finding
@@ -80,6 +82,7 @@ class PicksFile:
         False where record or channel numbers were made from the places of shots and geophones.
     """
 
+    path: Path
     table: PickTable
     findings: tuple[Finding, ...]
     has_record: bool
@@ -216,7 +219,7 @@ def read_picks_csv(path: Path, sigma_s: float | None = None) -> PicksFile:
         origin=rows.words("origin", PICK_ORIGINS, "manual"),
         note=note,
     )
-    return PicksFile(table, tuple(_findings(table, rows, int(unknown.sum()), sigma_s)), has_record, has_channel)
+    return PicksFile(path, table, tuple(_findings(table, rows, int(unknown.sum()), sigma_s)), has_record, has_channel)
 
 
 def _numbered(places: FloatArray, *, in_order: bool) -> npt.NDArray[np.int64]:

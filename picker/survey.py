@@ -9,7 +9,7 @@ import hashlib
 import json
 import os
 import sqlite3
-from collections.abc import Iterator, Sequence
+from collections.abc import Collection, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
@@ -18,11 +18,12 @@ from typing import Any, Self
 
 import numpy as np
 
-from picker import log, pick_layers, schema
+from picker import log, pick_layers, record_rows, schema
 from picker.errors import InputError
 from picker.findings import Finding
 from picker.log import LogEntry
 from picker.pick_layers import Override
+from picker.pick_places import match_places, records_of_picks
 from picker.picks import PickTable
 from picker.records import ShotHeader, ShotRecord, read_shot
 
@@ -68,16 +69,30 @@ class Survey:
     Methods that change something raise InputError where SQLite cannot write; the file is then as it was.
     """
 
-    def __init__(self, path: Path, connection: sqlite3.Connection) -> None:
+    def __init__(self, path: Path, connection: sqlite3.Connection, folder: Path | None = None) -> None:
         self.path = path
         self._connection = connection
+        self._folder = path.resolve().parent if folder is None else folder
 
     @classmethod
-    def create(cls, path: str | os.PathLike[str]) -> Self:
-        """Create a survey file and open it; InputError if something is there or the folder cannot be written."""
+    def create(cls, path: str | os.PathLike[str], folder: Path | None = None) -> Self:
+        """Create a survey file and open it.
+
+        Parameters
+        ----------
+        path : path
+            Where; nothing may be there.
+        folder : Path, optional
+            The folder that the file will be moved to, where that is not its own: paths are counted from it.
+
+        Raises
+        ------
+        InputError
+            If something is there or the folder cannot be written.
+        """
         place = Path(path)
         schema.create_file(place)
-        return cls(place, schema.open_file(place))
+        return cls(place, schema.open_file(place), folder)
 
     @classmethod
     def open(cls, path: str | os.PathLike[str]) -> Self:
@@ -156,9 +171,9 @@ class Survey:
                 "INSERT INTO file (path, size, mtime_ns, sha256, loaded_utc) VALUES (?, ?, ?, ?, ?)",
                 (self._relative(facts.path), facts.size, facts.mtime_ns, facts.sha256, schema.now_utc()),
             )
-            numbers = self._free_numbers([header.record for header in headers])
+            numbers = record_rows.free_numbers(connection, [header.record for header in headers])
             for header, number in zip(headers, numbers, strict=True):
-                self._add_record(header, number, cursor.lastrowid)
+                record_rows.add_record(connection, header, number, cursor.lastrowid)
             renumbered = dict(zip([header.record for header in headers], numbers, strict=True))
             connection.executemany(
                 "INSERT INTO finding (file_id, severity, record, channel, text, proposal) VALUES (?, ?, ?, ?, ?, ?)",
@@ -188,7 +203,7 @@ class Survey:
     def _relative(self, path: Path) -> str:
         """Path from the survey file's folder, so that both can be moved together; absolute on another drive."""
         try:
-            return Path(os.path.relpath(path.resolve(), self.path.resolve().parent)).as_posix()
+            return Path(os.path.relpath(path.resolve(), self._folder)).as_posix()
         except ValueError:
             return path.resolve().as_posix()
 
@@ -206,7 +221,7 @@ class Survey:
         old, new = known["path"], self._relative(facts.path)
         if old == new:
             self._connection.execute("UPDATE file SET mtime_ns = ? WHERE id = ?", (facts.mtime_ns, known["id"]))
-        elif not (self.path.resolve().parent / old).exists():
+        elif not (self._folder / old).exists():
             self._connection.execute(
                 "UPDATE file SET path = ?, mtime_ns = ? WHERE id = ?", (new, facts.mtime_ns, known["id"])
             )
@@ -237,99 +252,15 @@ class Survey:
         old = {"file": known["path"], "sha256": known["sha256"], "records": records}
         log.append(self._connection, batch, "load", old=old, reason="loaded again, changed")
 
-    def _free_numbers(self, wanted: list[int]) -> list[int]:
-        """Record numbers for new records: those wanted where free, the next above all others where not."""
-        taken = {row[0] for row in self._connection.execute("SELECT record FROM record")}
-        spare = max([*taken, *wanted, 0])
-        numbers = []
-        for number in wanted:
-            if number in taken:
-                spare += 1
-                number = spare
-            taken.add(number)
-            numbers.append(number)
-        return numbers
-
-    def _add_record(self, header: ShotHeader, number: int, file_id: int | None) -> None:
-        """Write one record and its traces."""
-        x_m, y_m, z_m = header.source_xyz.tolist()
-        interval_s = float(header.interval_s) if header.has_samples else None
-        self._connection.execute(
-            "INSERT INTO record VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?)",
-            (
-                number,
-                header.original_record,
-                file_id,
-                header.format,
-                header.encoding,
-                header.first_byte,
-                interval_s,
-                x_m,
-                y_m,
-                z_m,
-                float(header.source_depth_m),
-            ),
-        )
-        self._add_traces(header, number, range(header.channel.size))
-
-    def _add_traces(self, header: ShotHeader, number: int, rows: Sequence[int]) -> None:
-        """Write some traces of a record."""
-        self._connection.executemany(
-            "INSERT INTO trace VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?, ?)",
-            [
-                (
-                    number,
-                    int(header.channel[row]),
-                    int(header.sample_byte[row]),
-                    int(header.valid[row]),
-                    float(header.start_s[row]),
-                    *header.receiver_xyz[row].tolist(),
-                    str(header.state[row]),
-                    int(header.polarity[row]),
-                )
-                for row in rows
-            ],
-        )
-
     def records(self) -> list[ShotHeader]:
         """Shots of the survey, by record number, traces by channel; samples are not read."""
-        return self._headers("", ())
+        return record_rows.read_headers(self._connection, self._folder)
 
-    def _headers(self, where: str, values: tuple[int, ...]) -> list[ShotHeader]:
-        """Build the headers of some records."""
-        records = self._connection.execute(
-            "SELECT record.*, file.path FROM record LEFT JOIN file ON file.id = record.file_id"
-            f" {where} ORDER BY record.record",
-            values,
-        ).fetchall()
-        traces: dict[int, list[sqlite3.Row]] = {row["record"]: [] for row in records}
-        for trace in self._connection.execute(f"SELECT * FROM trace {where} ORDER BY record, channel", values):
-            traces[trace["record"]].append(trace)
-        return [self._header(row, traces[row["record"]]) for row in records]
-
-    def _header(self, row: sqlite3.Row, traces: list[sqlite3.Row]) -> ShotHeader:
-        """Build a header from its rows."""
-
-        def column(name: str, kind: type) -> Any:
-            return np.array([trace[name] for trace in traces], dtype=kind)
-
-        return ShotHeader(
-            record=row["record"],
-            original_record=row["original_record"],
-            interval_s=float("nan") if row["interval_s"] is None else row["interval_s"],
-            start_s=column("start_s", np.float64),
-            channel=column("channel", np.int64),
-            source_xyz=np.array([row["source_x_m"], row["source_y_m"], row["source_z_m"]]),
-            receiver_xyz=np.column_stack([column(f"receiver_{axis}_m", np.float64) for axis in "xyz"]),
-            source_depth_m=row["source_depth_m"],
-            valid=column("valid", np.int64),
-            state=column("state", np.str_),
-            polarity=column("polarity", np.int64),
-            file=self.path.resolve().parent / row["path"] if row["path"] is not None else Path(),
-            format=row["format"],
-            encoding=row["encoding"],
-            first_byte=row["first_byte"],
-            sample_byte=column("sample_byte", np.int64),
+    def records_of_files(self, sha256: Collection[str]) -> list[ShotHeader]:
+        """Shots that lie in the files with the checksums given, by record number."""
+        chosen = sorted(sha256)
+        return record_rows.read_headers(
+            self._connection, self._folder, f"file.sha256 IN ({', '.join('?' * len(chosen))})", chosen
         )
 
     def read(self, record: int) -> ShotRecord:
@@ -349,7 +280,7 @@ class Survey:
         InputError
             If there is no such record, it has no samples, or its file is gone or has changed since it was loaded.
         """
-        headers = self._headers("WHERE record = ?", (int(record),))
+        headers = record_rows.read_headers(self._connection, self._folder, "record.record = ?", (int(record),))
         if not headers:
             raise InputError(
                 "the survey has no such record", file=self.path, record=int(record), remedy="See `rockhead load`"
@@ -385,14 +316,23 @@ class Survey:
                 remedy="Put the original back, or load the changed file into a new survey file",
             )
 
-    def findings(self) -> list[Finding]:
-        """What was found in the files of the survey, file by file."""
+    def check_files(self) -> None:
+        """Make sure, before long work, that every file of records is there and unchanged; InputError if not."""
+        checked = set()
+        for header in self.records():
+            if header.has_samples and header.file not in checked:
+                self._check_unchanged(header)
+                checked.add(header.file)
+
+    def findings(self, sha256: Collection[str] | None = None) -> list[Finding]:
+        """List what was found in the files of records; in those with the checksums given, where they are given."""
         rows = self._connection.execute(
-            "SELECT finding.*, file.path FROM finding LEFT JOIN file ON file.id = file_id ORDER BY finding.id"
+            "SELECT finding.*, file.path, file.sha256 FROM finding JOIN file ON file.id = file_id ORDER BY finding.id"
         )
         return [
-            Finding(row["severity"], row["text"], row["proposal"], row["path"] or "", row["record"], row["channel"])
+            Finding(row["severity"], row["text"], row["proposal"], row["path"], row["record"], row["channel"])
             for row in rows
+            if sha256 is None or row["sha256"] in sha256
         ]
 
     # picks
@@ -448,8 +388,6 @@ class Survey:
         InputError
             If a record or channel is in the survey at another place, or a place does not say which record is meant.
         """
-        from picker.pick_places import match_places, records_of_picks
-
         with self.transaction() as connection:
             known = self.records()
             table = match_places(table, known, has_record=has_record, has_channel=has_channel)
@@ -457,11 +395,10 @@ class Survey:
             for header in records_of_picks(table):
                 old = there.get(header.record)
                 if old is None:
-                    self._add_record(header, header.record, None)
+                    record_rows.add_record(connection, header, header.record, None)
                 elif not old.has_samples:
-                    self._add_traces(
-                        header, header.record, np.flatnonzero(~np.isin(header.channel, old.channel)).tolist()
-                    )
+                    more = np.flatnonzero(~np.isin(header.channel, old.channel)).tolist()
+                    record_rows.add_traces(connection, header, header.record, more)
             return pick_layers.store_base(connection, table, "import", log.next_batch(connection), reason)
 
     def override(

@@ -205,10 +205,6 @@ class Linearised:
     shot_foot: IntArray
     receiver_foot: IntArray
 
-    def moved(self, step: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Both branches after a step of the unknowns, (unknowns,) or (draws, unknowns)."""
-        return self.direct_s + step @ self.direct_by.T, self.head_s + step @ self.head_by.T
-
 
 def linearise(problem: Problem, unknowns: FloatArray) -> Linearised:
     """Exact predictions of both branches at `unknowns` (unknowns,) with the delay-time derivatives."""
@@ -309,6 +305,7 @@ def solve(
     sigma = error_scale * problem.observed.sigma_s
     at = linearise(problem, state)
     converged = False
+    standard: FloatArray = np.zeros(mean.size)  # the state as standard normals of the prior, once a step was taken
     head = (at.head_s < at.direct_s) & refractor
     for step in range(iterations):
         if step < FREE_STEPS:  # later, a pick that lies on the crossover would hop from branch to branch for ever
@@ -321,10 +318,12 @@ def solve(
         target = residual + slope @ (state - mean)
         whitened = (slope @ factor) * (np.sqrt(weight) / sigma)[:, None]
         normal = np.eye(mean.size) + whitened.T @ whitened
-        solved = mean + factor @ np.linalg.solve(normal, whitened.T @ (target * np.sqrt(weight) / sigma))
-        move = solved - state
+        normals: FloatArray = np.linalg.solve(normal, whitened.T @ (target * np.sqrt(weight) / sigma))
+        move = mean + factor @ normals - state
         shift = np.abs(slope @ move) / sigma
-        state = state + move * (1.0 if step < FREE_STEPS else 0.6)
+        damping = 1.0 if step < FREE_STEPS else 0.6
+        state = state + damping * move
+        standard = normals if step == 0 else standard + damping * (normals - standard)
         at = linearise(problem, state)
         if step > 3 and float(shift.max()) < SETTLED:
             converged = True
@@ -335,13 +334,34 @@ def solve(
     slope = np.where(head[:, None], at.head_by, at.direct_by)
     whitened = (slope @ factor) * (np.sqrt(weight) / sigma)[:, None]
     normal = np.eye(mean.size) + whitened.T @ whitened
-    standard = np.linalg.lstsq(factor, state - mean, rcond=None)[0]
     evidence = (
         float(np.sum(log_mixture(residual, sigma, problem.observed.confidence)))
         - 0.5 * float(standard @ standard)
         - 0.5 * float(np.linalg.slogdet(normal)[1])
     )
     return Solution(state, at, head, weight, evidence, converged)
+
+
+def screen(problem: Problem, choices: tuple[Roughness, ...], near: Solution, *, error_scale: float = 1.0) -> FloatArray:
+    """Log evidence of each roughness with branches, weights and derivatives held as in a solution nearby.
+
+    Returns float (choices,), up to one constant: the marginal likelihood of a linear problem with normal errors.
+    """
+    head, at = near.head, near.at
+    slope = np.where(head[:, None], at.head_by, at.direct_by)
+    root = np.sqrt(near.weight) / (error_scale * problem.observed.sigma_s)
+    evidence = np.empty(len(choices))
+    for number, rough in enumerate(choices):
+        mean, factor = prior(problem, rough)
+        predicted = np.where(head, at.head_s, at.direct_s)
+        target = (problem.observed.time_s - predicted + slope @ (near.unknowns - mean)) * root
+        whitened = (slope @ factor) * root[:, None]
+        normal = np.eye(mean.size) + whitened.T @ whitened
+        pull = whitened.T @ target
+        evidence[number] = 0.5 * (
+            float(pull @ np.linalg.solve(normal, pull)) - float(target @ target) - float(np.linalg.slogdet(normal)[1])
+        )
+    return evidence
 
 
 def log_mixture(residual_s: FloatArray, sigma_s: FloatArray, confidence: FloatArray) -> FloatArray:

@@ -13,12 +13,15 @@ from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
+from scipy.linalg import cho_factor, cho_solve
 
-from interp.refractor import Problem, Profiles, Roughness, Solution, prior, profiles, solve
+from interp.refractor import Problem, Profiles, Roughness, Solution, prior, profiles, screen, solve
 
 FloatArray = npt.NDArray[np.float64]
+BoolArray = npt.NDArray[np.bool_]
 
 BRANCH_ROUNDS = 4
+LEAST_PICK_WEIGHT = 1e-8  # as good as nothing, and yet a number to divide by
 MOST_TRIES = 20  # draws of an impossible ground are drawn again this often
 SLOWEST_M_S = 80.0  # loosest dry topsoil (common practice, no source)
 FASTEST_M_S = 7500.0  # faster than rock near the ground is
@@ -40,7 +43,7 @@ class Ensemble:
     """Joint draws: `unknowns` (draws, unknowns), `head` (draws, picks), `predicted_s` (draws, picks)."""
 
     unknowns: FloatArray
-    head: npt.NDArray[np.bool_]
+    head: BoolArray
     predicted_s: FloatArray
     along: Profiles
 
@@ -52,7 +55,6 @@ def weigh_roughness(
     *,
     error_scale: float,
     refractor: bool = True,
-    progress: Callable[[int, int], None] | None = None,
 ) -> tuple[Candidate, ...]:
     """Posterior probability of each roughness: evidence of its own solution, uniform prior over the choices.
 
@@ -66,34 +68,31 @@ def weigh_roughness(
         Factor on all stated pick errors.
     refractor : bool
         False for a ground without refractor: every first arrival is the direct wave.
-    progress : callable of (done, all), optional
 
     Returns
     -------
     tuple of Candidate, the improbable ones left out; probabilities sum to 1.
     """
-    solutions = []
-    for done, rough in enumerate(choices):
-        solutions.append(
-            solve(
-                problem,
-                rough,
-                error_scale=error_scale,
-                refractor=refractor,
-                unknowns=best.unknowns,
-                iterations=WARM_STEPS,
-            )
+    screened = screen(problem, choices, best, error_scale=error_scale)
+    likely = [choices[number] for number in np.flatnonzero(screened > screened.max() + np.log(LEAST_WEIGHT))]
+    solutions = [
+        solve(
+            problem,
+            rough,
+            error_scale=error_scale,
+            refractor=refractor,
+            unknowns=best.unknowns,
+            iterations=WARM_STEPS,
         )
-        if progress is not None:
-            progress(done + 1, len(choices))
+        for rough in likely
+    ]
     evidence = np.array([solution.log_evidence for solution in solutions])
     weight = np.exp(evidence - evidence.max())
-    weight /= weight.sum()
-    weight = np.where(weight < LEAST_WEIGHT, 0.0, weight)
+    weight = np.where(weight < LEAST_WEIGHT * weight.sum(), 0.0, weight)
     weight /= weight.sum()
     return tuple(
         Candidate(rough, solution, float(share))
-        for rough, solution, share in zip(choices, solutions, weight, strict=True)
+        for rough, solution, share in zip(likely, solutions, weight, strict=True)
         if share > 0
     )
 
@@ -130,65 +129,111 @@ def draw(
     Ensemble
     """
     share = np.array([candidate.probability for candidate in candidates])
-    of_candidate = np.sort(rng.choice(share.size, size=draws, p=share / share.sum()))
-    unknowns, heads, predictions = [], [], []
-    for number, candidate in enumerate(candidates):
-        mean, factor = prior(problem, candidate.rough)
-        for _ in range(int(np.sum(of_candidate == number))):
-            for _try in range(MOST_TRIES):
-                state, head, predicted = _one_draw(
-                    problem, candidate.solution, mean, factor, rng, error_scale, refractor
-                )
-                if _possible(problem, state, refractor):
-                    break
-            unknowns.append(state)
-            heads.append(head)
-            predictions.append(predicted)
-            if progress is not None and len(unknowns) % 50 == 0:
-                progress(len(unknowns), draws)
-    states = np.array(unknowns)
-    return Ensemble(states, np.array(heads), np.array(predictions), profiles(problem, states))
+    counts = rng.multinomial(draws, share / share.sum())
+    states, heads, predictions = [], [], []
+    done = 0
+    for candidate, count in zip(candidates, counts.tolist(), strict=True):
+        if count == 0:
+            continue
+        drawer = _Drawer(problem, candidate, error_scale, refractor)
+        state, head, predicted = drawer.draw(count, rng)
+        for _ in range(MOST_TRIES):
+            again = np.flatnonzero(~_possible(problem, state, refractor))
+            if again.size == 0:
+                break
+            state[again], head[again], predicted[again] = drawer.draw(again.size, rng)
+        states.append(state)
+        heads.append(head)
+        predictions.append(predicted)
+        done += count
+        if progress is not None:
+            progress(done, draws)
+    unknowns = np.concatenate(states)
+    return Ensemble(unknowns, np.concatenate(heads), np.concatenate(predictions), profiles(problem, unknowns))
 
 
-def _one_draw(
-    problem: Problem,
-    solution: Solution,
-    mean: FloatArray,
-    factor: FloatArray,
-    rng: np.random.Generator,
-    error_scale: float,
-    refractor: bool,
-) -> tuple[FloatArray, npt.NDArray[np.bool_], FloatArray]:
-    """One draw of the unknowns, the branch of every pick in it and the predicted times."""
-    observed, at = problem.observed, solution.at
-    normals = rng.standard_normal(observed.time_s.size)
-    sides = np.where(normals < 0, observed.early_sigma_s, observed.late_sigma_s)
-    moved_s = observed.time_s + error_scale * sides * normals
-    moved_prior = rng.standard_normal(mean.size)
-    root_weight = np.sqrt(solution.weight) / (error_scale * observed.sigma_s)
-    head = solution.head
-    for _ in range(BRANCH_ROUNDS):
-        predicted = np.where(head, at.head_s, at.direct_s)
-        slope = np.where(head[:, None], at.head_by, at.direct_by)
-        target = moved_s - predicted + slope @ (solution.unknowns - mean)
-        whitened = (slope @ factor) * root_weight[:, None]
-        normal = np.eye(mean.size) + whitened.T @ whitened
-        state = mean + factor @ np.linalg.solve(normal, whitened.T @ (target * root_weight) + moved_prior)
-        direct_s, head_s = at.moved(state - solution.unknowns)
-        again = (head_s < direct_s) & refractor
-        if np.array_equal(again, head):
-            break
-        head = again
-    return state, again, np.where(again, head_s, direct_s)
+class _Drawer:
+    """Draws around one solution.
+
+    The normal equations are factored once; a draw that moves picks to the other branch corrects the factor for
+    those picks alone (Woodbury identity).
+    """
+
+    def __init__(self, problem: Problem, candidate: Candidate, error_scale: float, refractor: bool) -> None:
+        self.observed, self.solution, self.refractor = problem.observed, candidate.solution, refractor
+        self.error_scale = error_scale
+        at = self.solution.at
+        self.mean, self.factor = prior(problem, candidate.rough)
+        self.root = np.sqrt(np.maximum(self.solution.weight, LEAST_PICK_WEIGHT)) / (error_scale * self.observed.sigma_s)
+        from_mean = self.solution.unknowns - self.mean
+        self.direct_rows = (at.direct_by @ self.factor) * self.root[:, None]
+        self.head_rows = (at.head_by @ self.factor) * self.root[:, None]
+        self.direct_origin = at.direct_s - at.direct_by @ from_mean
+        self.head_origin = at.head_s - at.head_by @ from_mean
+        self.rows = np.where(self.solution.head[:, None], self.head_rows, self.direct_rows)
+        self.origin = np.where(self.solution.head, self.head_origin, self.direct_origin)
+        self.normal = cho_factor(np.eye(self.mean.size) + self.rows.T @ self.rows)
+
+    def draw(self, count: int, rng: np.random.Generator) -> tuple[FloatArray, BoolArray, FloatArray]:
+        """States (count, unknowns), branches (count, picks) and predicted times (count, picks)."""
+        observed = self.observed
+        normals = rng.standard_normal((count, observed.time_s.size))
+        sides = np.where(normals < 0, observed.early_sigma_s, observed.late_sigma_s)
+        moved_s = observed.time_s + self.error_scale * sides * normals
+        moved_prior = rng.standard_normal((count, self.mean.size))
+        pull = ((moved_s - self.origin) * self.root) @ self.rows + moved_prior
+        standard = cho_solve(self.normal, pull.T).T
+        head = np.tile(self.solution.head, (count, 1))
+        todo = np.arange(count)
+        for _ in range(BRANCH_ROUNDS):
+            first = self._head_first(standard[todo])
+            todo = todo[np.any(first != head[todo], axis=1)]
+            if todo.size == 0:
+                break
+            head[todo] = self._head_first(standard[todo])
+            for row in todo:
+                standard[row] = self._resolved(head[row], moved_s[row], pull[row])
+        direct_s, head_s = self._branches(standard)
+        head = (head_s < direct_s) & self.refractor
+        return self.mean + standard @ self.factor.T, head, np.where(head, head_s, direct_s)
+
+    def _branches(self, standard: FloatArray) -> tuple[FloatArray, FloatArray]:
+        direct = self.direct_origin + standard @ self.direct_rows.T / self.root
+        return direct, self.head_origin + standard @ self.head_rows.T / self.root
+
+    def _head_first(self, standard: FloatArray) -> BoolArray:
+        direct, head = self._branches(standard)
+        return np.asarray((head < direct) & self.refractor)
+
+    def _resolved(self, head: BoolArray, moved_s: FloatArray, pull: FloatArray) -> FloatArray:
+        """Solution of one draw whose branches differ from those of the factored equations."""
+        changed = np.flatnonzero(head != self.solution.head)
+        if changed.size == 0:
+            return np.asarray(cho_solve(self.normal, pull))
+        new = np.where(head[changed, None], self.head_rows[changed], self.direct_rows[changed])
+        old = self.rows[changed]
+        new_origin = np.where(head[changed], self.head_origin[changed], self.direct_origin[changed])
+        root = self.root[changed]
+        pull = (
+            pull
+            + ((moved_s[changed] - new_origin) * root) @ new
+            - ((moved_s[changed] - self.origin[changed]) * root) @ old
+        )
+        both = np.concatenate([new, old])
+        sign = np.concatenate([np.ones(changed.size), -np.ones(changed.size)])
+        solved = cho_solve(self.normal, np.column_stack([pull, both.T]))
+        plain, spread = solved[:, 0], solved[:, 1:]
+        return np.asarray(plain - spread @ np.linalg.solve(np.diag(sign) + both @ spread, both @ plain))
 
 
-def _possible(problem: Problem, state: FloatArray, refractor: bool) -> bool:
-    """Whether a draw is a ground that can exist: velocities of earth materials, the refractor the faster."""
+def _possible(problem: Problem, states: FloatArray, refractor: bool) -> BoolArray:
+    """Which draws are a ground that can exist: velocities of earth materials, the refractor the faster."""
     columns = problem.columns
-    upper, lower = state[columns.upper_mean], state[columns.lower_mean]
-    if not SLOWEST_M_S < 1 / upper < FASTEST_M_S:
-        return False
-    return not refractor or (0 < lower < upper and 1 / lower < FASTEST_M_S)
+    upper, lower = states[:, columns.upper_mean], states[:, columns.lower_mean]
+    possible = (upper > 1 / FASTEST_M_S) & (upper < 1 / SLOWEST_M_S)
+    if refractor:
+        possible &= (lower > 1 / FASTEST_M_S) & (lower < upper)
+    return np.asarray(possible)
 
 
 def branch_probability(ensemble: Ensemble) -> FloatArray:

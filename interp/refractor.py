@@ -318,7 +318,7 @@ def solve(
         target = residual + slope @ (state - mean)
         whitened = (slope @ factor) * (np.sqrt(weight) / sigma)[:, None]
         normal = np.eye(mean.size) + whitened.T @ whitened
-        normals: FloatArray = np.linalg.solve(normal, whitened.T @ (target * np.sqrt(weight) / sigma))
+        normals = np.asarray(np.linalg.solve(normal, whitened.T @ (target * np.sqrt(weight) / sigma)), dtype=np.float64)
         move = mean + factor @ normals - state
         shift = np.abs(slope @ move) / sigma
         damping = 1.0 if step < FREE_STEPS else 0.6

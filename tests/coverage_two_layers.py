@@ -11,7 +11,7 @@ from dataclasses import dataclass
 import numpy as np
 from made_survey import PlaneGround, plane_survey
 
-from interp.interpret import InterpretSettings, interpret
+from interp.interpretation import InterpretSettings, interpret
 
 
 @dataclass(frozen=True)

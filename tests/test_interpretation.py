@@ -6,7 +6,7 @@ import pytest
 from coverage_two_layers import coverage
 from made_survey import PlaneGround, plane_survey
 
-from interp.interpret import InterpretSettings, interpret, take
+from interp.interpretation import InterpretSettings, interpret, take
 
 GROUND = PlaneGround(500.0, 2200.0, 5.0, 0.03)
 RECEIVERS = np.arange(24) * 3.0

@@ -125,7 +125,9 @@ def picks_to_csv(table: PickTable, units: str = "m") -> str:
     for name in TIMES_MS:
         cells[name] = [_number(value, 3) for value in getattr(table, f"{name[:-3]}_s").tolist()]
     cells["confidence"] = [_number(value) for value in table.confidence.tolist()]
-    cells |= {name: getattr(table, name).tolist() for name in ("state", "origin", "note")}
+    cells |= {name: getattr(table, name).tolist() for name in ("state", "origin")}
+    # a lone carriage return would not be quoted, and other programs would take it for the end of the row
+    cells["note"] = [note.replace("\r\n", "\n").replace("\r", "\n") for note in table.note.tolist()]
     text = io.StringIO()
     writer = csv.writer(text, lineterminator="\n")
     writer.writerow(cells)

@@ -17,7 +17,7 @@ from picker.picks_csv import COLUMNS, picks_to_csv, read_picks_csv, write_picks_
 NUMBERS = st.floats(-1e4, 1e4, allow_nan=False).map(lambda value: value + 0.0)  # no negative zero
 SMALL = st.floats(1e-9, 10.0)
 OR_MISSING = st.one_of(st.just(float("nan")), st.floats(-10, 10).map(lambda value: value + 0.0))
-NOTES = st.text(st.characters(codec="utf-8", exclude_characters="\0", exclude_categories=["Cs"]), max_size=12)
+NOTES = st.text(st.characters(codec="utf-8", exclude_characters="\0\r", exclude_categories=["Cs"]), max_size=12)
 
 
 @st.composite
@@ -103,6 +103,12 @@ def test_columns_stand_in_the_order_of_the_contract_with_times_in_milliseconds_a
     assert lines[1] == "3,1,-5,0,101.5,0,0,101,5,12.3,0.5,11.5,13.1,0.6,0,1,0.2,0.3,0.99,kept,auto,"
     assert lines[2].startswith("3,2,-5,0,101.5,2,0,100.5,7,,,,,,,1,0.2,0.3,0,none,auto,")
     assert lines[2].endswith('"noise, all of it"')
+
+
+def test_line_ends_in_a_note_come_back_as_plain_ones(tmp_path):
+    path = tmp_path / "picks.csv"
+    write_picks_csv(dataclasses.replace(a_table(), note=["one\rtwo\r\nthree", "x"]), path)
+    npt.assert_array_equal(read_picks_csv(path).table.note, ["one\ntwo\nthree", "x"])
 
 
 def test_feet_leave_and_come_back(tmp_path):

@@ -14,7 +14,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
-from scipy.special import log_ndtr, logsumexp
+from scipy.special import log_ndtr, logsumexp, ndtr
 
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
@@ -31,7 +31,9 @@ STEPS_DOWN = (
 )  # standard errors are first taken this much larger, to let no wild pick steer
 ROUNDS = 5  # sides are fitted, what they share is learnt, and again
 FIRST_SCATTER = 0.03  # departure from straight lines, as a share of the span of times, before it is learnt
-LEAST_SPREAD = 0.2  # sides may differ this much in slowness before it is held against them: ground varies, layers dip
+# sides may differ by so much, as a share of the value, before it is held against them: ground varies, layers dip
+DIRECT_SPREAD, REFRACTED_SPREAD, INTERCEPT_SPREAD = 0.1, 0.25, 0.3
+DIP_SPREAD = 0.08  # apparent slowness differs by sin(dip) / V1: a dip of five degrees either way
 SEEN_LOG_ODDS = 3.0  # twenty to one
 MINUS_TIME_PICKS = 4  # receivers that must see the head wave from both shots
 
@@ -198,7 +200,7 @@ def assign_branches(
                 )
     shared, scans = _settle(sides, two_layers=True)
     _, single = _settle(sides, two_layers=False)
-    two = sum(float(logsumexp(scan.log_weight)) - np.log(scan.log_weight.size) for scan in scans)
+    two = sum(float(logsumexp(scan.log_weight)) for scan in scans)
     two -= 1.5 * np.log(time.size)  # V2, intercept and scatter were learnt from the picks (Schwarz 1978)
     one = sum(float(scan.log_weight[-1]) for scan in single)
     seen = float(np.exp(-np.logaddexp(0.0, one - two)))
@@ -288,8 +290,15 @@ def _scan(side: _Side, shared: _Shared, two_layers: bool) -> _Scan:
     order_sd = np.sqrt(direct.slope_variance + refracted.slope_variance)
     after_sd = np.sqrt(refracted.constant_variance + direct.constant_variance)
     if two_layers:
-        log_weight = log_weight + log_ndtr((direct.slope - refracted.slope) / order_sd)
-        log_weight = log_weight + log_ndtr((refracted.constant - direct.constant) / after_sd)
+        order, after = direct.slope - refracted.slope, refracted.constant - direct.constant
+        log_weight = log_weight + log_ndtr(order / order_sd) + log_ndtr(after / after_sd)
+        crossover = after / np.maximum(order, 1e-3 * shared.direct[0])
+        both = np.hypot(shared.scatter_direct, shared.scatter_refracted)
+        blur = np.sqrt(after_sd**2 + both**2 + (crossover * order_sd) ** 2) / np.maximum(order, 1e-3 * shared.direct[0])
+        edges = np.concatenate([[-np.inf], side.offset, [np.inf]])
+        low, high = (edges[:-1] - crossover) / blur, (edges[1:] - crossover) / blur
+        inside = ndtr(np.where(low > 0, -low, high)) - ndtr(np.where(low > 0, -high, low))
+        log_weight = log_weight + np.log(np.maximum(inside, 1e-30))
     return _Scan(
         log_weight=np.asarray(log_weight),
         lines=np.stack([direct.slope, direct.constant, refracted.slope, refracted.constant], axis=1),
@@ -348,25 +357,30 @@ def _learn(sides: list[_Side], scans: list[_Scan], broad: _Shared, before: _Shar
     if any(inside):  # a line through the shot with nothing beyond it may be a head wave seen from afar
         direct = [value for value, both in zip(direct, inside, strict=True) if both]
     sigma = float(np.median(np.concatenate([side.sigma for side in sides])))
+    shared_direct = _shared_value(direct, broad.direct, DIRECT_SPREAD, 0.0)
+    dip = DIP_SPREAD * shared_direct[0]
+    shared_refracted = _shared_value(refracted, broad.refracted, REFRACTED_SPREAD, dip)
     return replace(
         broad,
-        direct=_shared_value(direct, broad.direct),
-        refracted=_shared_value(refracted, broad.refracted),
-        intercept=_shared_value(intercept, broad.intercept),
+        direct=shared_direct,
+        refracted=(max(shared_refracted[0], 0.5 * dip), shared_refracted[1]),
+        intercept=_shared_value(intercept, broad.intercept, INTERCEPT_SPREAD, 0.0),
         scatter_direct=_scatter(near_residual, near_weight, sigma, before.scatter_direct),
         scatter_refracted=_scatter(far_residual, far_weight, sigma, before.scatter_refracted),
     )
 
 
-def _shared_value(found: list[tuple[float, float]], broad: tuple[float, float]) -> tuple[float, float]:
-    """Robust mean over sides and how much sides may differ from it."""
+def _shared_value(
+    found: list[tuple[float, float]], broad: tuple[float, float], share: float, least: float
+) -> tuple[float, float]:
+    """Robust mean over sides, and how much sides may differ from it: no less than `share` of it nor than `least`."""
     if not found:
         return broad
     value, weight = np.array(found).T
     middle = _weighted_median(value, weight)
-    spread = 1.4826 * _weighted_median(np.abs(value - middle), weight)
-    least = LEAST_SPREAD * abs(middle) * (1 + 2 / len(found))  # a single side says little about the others
-    return middle, float(min(max(2 * spread, least, 1e-3 * broad[1]), broad[1]))
+    spread = 2 * 1.4826 * _weighted_median(np.abs(value - middle), weight)
+    floor = max(share * abs(middle), least, 1e-3 * broad[1]) * (1 + 2 / len(found))  # one side says little of others
+    return middle, float(min(max(spread, floor), broad[1]))
 
 
 def _scatter(residual: list[FloatArray], weight: list[FloatArray], sigma: float, before: float) -> float:

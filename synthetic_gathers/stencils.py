@@ -1,0 +1,166 @@
+"""Compiled time stepping of the velocity-stress equations on a staggered grid.
+
+Second order in time, fourth in space, second in the cells next to the ground surface where wider stencils would reach
+into air. Absorbing edges are convolutional perfectly matched layers: an extra term for each derivative. Each column
+is written by one thread and in one order, so the result does not depend on the number of threads.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from typing import Any
+
+import numba
+import numpy as np
+import numpy.typing as npt
+
+_NEAR = np.float32(9.0 / 8.0)
+_FAR = np.float32(1.0 / 24.0)
+
+Array = npt.NDArray[Any]
+
+
+def _compiled(**options: Any) -> Callable[[Callable[..., Any]], Callable[..., Any]]:
+    """numba.njit with a disk cache, or without one where no cache folder can be written."""
+
+    def decorate(function: Callable[..., Any]) -> Callable[..., Any]:
+        try:
+            return numba.njit(cache=True, **options)(function)  # type: ignore[no-any-return]
+        except RuntimeError:
+            return numba.njit(**options)(function)  # type: ignore[no-any-return]
+
+    return decorate
+
+
+@_compiled()
+def _dx_kernel(a, i, j, wide):  # type: ignore[no-untyped-def]
+    """Difference of `a` from column i to i + 1."""
+    if wide:
+        return _NEAR * (a[i + 1, j] - a[i, j]) - _FAR * (a[i + 2, j] - a[i - 1, j])
+    return a[i + 1, j] - a[i, j]
+
+
+@_compiled()
+def _dz_kernel(a, i, j, wide):  # type: ignore[no-untyped-def]
+    """Difference of `a` from row j to j + 1."""
+    if wide:
+        return _NEAR * (a[i, j + 1] - a[i, j]) - _FAR * (a[i, j + 2] - a[i, j - 1])
+    return a[i, j + 1] - a[i, j]
+
+
+@_compiled()
+def _add_two_kernel(i, rows, out, gain, a, ia, b, up, per_x, per_z, memory_x, memory_z, edge_x, edge_z):  # type: ignore[no-untyped-def]
+    """Add gain * (da/dx + db/dz) to `out` along column i: a momentum equation, or the shear stress.
+
+    `rows` holds first, first with wide x stencil, first with wide z stencil, end, first absorbing; `ia` the column
+    at which da/dx is taken, `up` how many rows higher db/dz starts.
+    """
+    first, wide_x, wide_z, end, absorb = rows[i, 0], rows[i, 1], rows[i, 2], rows[i, 3], rows[i, 4]
+    for j in range(first, wide_z):
+        dx = _dx_kernel(a, ia, j, j >= wide_x)
+        out[i, j] += gain[i, j] * (per_x * dx + per_z[j] * _dz_kernel(b, i, j - up, False))
+    for j in range(wide_z, end):
+        k = j - up
+        dx = _NEAR * (a[ia + 1, j] - a[ia, j]) - _FAR * (a[ia + 2, j] - a[ia - 1, j])
+        dz = _NEAR * (b[i, k + 1] - b[i, k]) - _FAR * (b[i, k + 2] - b[i, k - 1])
+        out[i, j] += gain[i, j] * (per_x * dx + per_z[j] * dz)
+    if edge_x[i, 1] != 0.0:
+        for j in range(first, end):
+            memory_x[i, j] = edge_x[i, 0] * memory_x[i, j] + edge_x[i, 1] * _dx_kernel(a, ia, j, j >= wide_x)
+            out[i, j] += gain[i, j] * per_x * memory_x[i, j]
+    for j in range(absorb, end):
+        memory_z[i, j] = edge_z[j, 0] * memory_z[i, j] + edge_z[j, 1] * _dz_kernel(b, i, j - up, True)
+        out[i, j] += gain[i, j] * per_z[j] * memory_z[i, j]
+
+
+@_compiled()
+def _add_normal_kernel(i, rows, sxx, szz, c11, c13, c33, vx, vz, per_x, per_z, memory_x, memory_z, edge_x, edge_z):  # type: ignore[no-untyped-def]
+    """Normal stresses along column i from the strain rates dvx/dx and dvz/dz."""
+    first, wide_x, wide_z, end, absorb = rows[i, 0], rows[i, 1], rows[i, 2], rows[i, 3], rows[i, 4]
+    for j in range(first, wide_z):
+        dx = per_x * _dx_kernel(vx, i - 1, j, j >= wide_x)
+        dz = per_z[j] * _dz_kernel(vz, i, j, False)
+        sxx[i, j] += c11[i, j] * dx + c13[i, j] * dz
+        szz[i, j] += c13[i, j] * dx + c33[i, j] * dz
+    for j in range(wide_z, end):
+        dx = per_x * (_NEAR * (vx[i, j] - vx[i - 1, j]) - _FAR * (vx[i + 1, j] - vx[i - 2, j]))
+        dz = per_z[j] * (_NEAR * (vz[i, j + 1] - vz[i, j]) - _FAR * (vz[i, j + 2] - vz[i, j - 1]))
+        sxx[i, j] += c11[i, j] * dx + c13[i, j] * dz
+        szz[i, j] += c13[i, j] * dx + c33[i, j] * dz
+    if edge_x[i, 1] != 0.0:
+        for j in range(first, end):
+            memory_x[i, j] = edge_x[i, 0] * memory_x[i, j] + edge_x[i, 1] * _dx_kernel(vx, i - 1, j, j >= wide_x)
+            sxx[i, j] += c11[i, j] * per_x * memory_x[i, j]
+            szz[i, j] += c13[i, j] * per_x * memory_x[i, j]
+    for j in range(absorb, end):
+        memory_z[i, j] = edge_z[j, 0] * memory_z[i, j] + edge_z[j, 1] * _dz_kernel(vz, i, j, True)
+        sxx[i, j] += c13[i, j] * per_z[j] * memory_z[i, j]
+        szz[i, j] += c33[i, j] * per_z[j] * memory_z[i, j]
+
+
+@_compiled(nogil=True)
+def _advance_kernel(force, window, rows, fields, moduli, per_x, per_z, memory, edges, source_node, source_gain):  # type: ignore[no-untyped-def]
+    """One step for each entry of `force`; see `advance`."""
+    vx, vz, sxx, szz, sxz = fields[0], fields[1], fields[2], fields[3], fields[4]
+    c11, c13, c33, c44, bx, bz = moduli[0], moduli[1], moduli[2], moduli[3], moduli[4], moduli[5]
+    centre_z, face_z = per_z[0], per_z[1]
+    centre_x, half_x, centre_edge_z, face_edge_z = edges
+    for step in range(force.size):
+        left, right = window[step, 0], window[step, 1]
+        for i in range(left, right):
+            _add_two_kernel(
+                i, rows, vx, bx, sxx, i, sxz, 0, per_x, centre_z, memory[0], memory[1], half_x, centre_edge_z
+            )
+            _add_two_kernel(
+                i, rows, vz, bz, sxz, i - 1, szz, 1, per_x, face_z, memory[2], memory[3], centre_x, face_edge_z
+            )
+        for node in range(source_gain.size):
+            vz[source_node[node, 0], source_node[node, 1]] += source_gain[node] * force[step]
+        for i in range(left, right):
+            _add_normal_kernel(
+                i, rows, sxx, szz, c11, c13, c33, vx, vz, per_x, centre_z, memory[4], memory[5], centre_x, centre_edge_z
+            )
+            _add_two_kernel(i, rows, sxz, c44, vz, i, vx, 1, per_x, face_z, memory[6], memory[7], half_x, face_edge_z)
+
+
+def advance(
+    force: Array,
+    window: Array,
+    rows: Array,
+    fields: Array,
+    moduli: Array,
+    per_x: float,
+    per_z: Array,
+    memory: Array,
+    edges: tuple[Array, ...],
+    source_node: Array,
+    source_gain: Array,
+) -> None:
+    """Advance the fields in place by one time step for each entry of `force`.
+
+    Parameters
+    ----------
+    force : float32 (steps,)
+        Force of each step, any unit; the velocity gains `source_gain` times it.
+    window : int64 (steps, 2)
+        First column and end of the columns that a wave can have reached.
+    rows : int64 (columns, 5)
+        First row that is ground, first with the wide x stencil, first with the wide z stencil, end, first absorbing.
+    fields : float32 (5, columns, rows)
+        vx, vz (m/s), sxx, szz, sxz (Pa); changed.
+    moduli : float32 (6, columns, rows)
+        c11, c13, c33, c44 (Pa) and buoyancies at vx and vz (m^3/kg), each times the time step (s).
+    per_x : float
+        1 / column spacing, 1/m.
+    per_z : float32 (2, rows)
+        1 / row spacing at centres and at faces, 1/m.
+    memory : float32 (8, columns, rows)
+        Memory of the absorbing edges; changed.
+    edges : four float32 (columns or rows, 2)
+        Decay and gain of that memory: at column centres, half columns, row centres, row faces; gain 0 = not absorbing.
+    source_node : int64 (nodes, 2), source_gain : float32 (nodes,)
+        vz nodes that take the force, and their share.
+    """
+    _advance_kernel(
+        force, window, rows, fields, moduli, np.float32(per_x), per_z, memory, edges, source_node, source_gain
+    )

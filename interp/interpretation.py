@@ -11,13 +11,14 @@ import numpy as np
 import numpy.typing as npt
 from scipy.special import expit
 
+from interp.branches import assign_branches
 from interp.control import Control, control_of_stations, least_depth_m
 from interp.ground import lay_ground
 from interp.line import Line, lay_out_line
 from interp.refractor import Observations, Problem, Roughness, Solution, solve
 from interp.section import DepthSection, PickFit
 from interp.spread import Ensemble, branch_probability, draw, weigh_roughness
-from interp.start import flat_start
+from interp.start import branch_start, flat_start
 from picker.picks import PickTable
 
 FloatArray = npt.NDArray[np.float64]
@@ -90,9 +91,9 @@ def interpret(
         )
         used = take(used, ~line.broadside)
         line = lay_out_line(used)
-    problem = _problem(used, line)
     middle = Roughness(0.06, 0.02, 0.15, settings.correlation_spacings[-1] * _spacing(line))
-    seen, bare = solve(problem, middle), solve(problem, middle, refractor=False)
+    problem, seen = _best_start(used, line, middle)
+    bare = solve(problem, middle, refractor=False)
     seen_probability = _seen_probability(seen, bare)
     refractor = seen_probability > 0.5
     best = seen if refractor else bare
@@ -167,7 +168,7 @@ def _seen_probability(seen: Solution, bare: Solution) -> float:
     return float(expit(seen.log_evidence - bare.log_evidence))
 
 
-def _problem(used: PickTable, line: Line) -> Problem:
+def _observations(used: PickTable, line: Line) -> Observations:
     records, record_of = np.unique(used.record, return_inverse=True)
     first = np.array([int(np.flatnonzero(record_of == number)[0]) for number in range(records.size)])
     stations = line.station_along_m.size
@@ -178,7 +179,7 @@ def _problem(used: PickTable, line: Line) -> Problem:
     late = np.where(np.isfinite(used.late_s), (used.late_s - used.time_s) / 1.645, sigma)
     both = np.sqrt(0.5 * (early**2 + late**2))
     stretch = np.where(both > 0, sigma / np.where(both > 0, both, 1.0), 1.0)
-    observed = Observations(
+    return Observations(
         time_s=used.time_s,
         sigma_s=sigma,
         early_sigma_s=np.where(both > 0, early * stretch, sigma),
@@ -190,8 +191,27 @@ def _problem(used: PickTable, line: Line) -> Problem:
         shift_sigma_s=np.nan_to_num(used.time_break_sigma_s[first]),
         static_sigma_s=np.nan_to_num(static),
     )
-    start = flat_start(used.offset_m, used.time_s - np.nan_to_num(used.time_break_shift_s), sigma)
-    return Problem(line, lay_ground(line), observed, start)
+
+
+def _best_start(used: PickTable, line: Line, rough: Roughness) -> tuple[Problem, Solution]:
+    """The problem and its solution from whichever starting ground explains the picks better."""
+    observed = _observations(used, line)
+    true_s = observed.time_s - observed.shift_s[observed.record_of]
+    branches = assign_branches(
+        observed.record_of,
+        line.shot_along_m[line.shot_of],
+        line.station_along_m[line.station_of],
+        true_s,
+        observed.sigma_s,
+        observed.confidence,
+        observed.shift_sigma_s[observed.record_of],
+    )
+    starts = [flat_start(used.offset_m, true_s, observed.sigma_s), branch_start(branches)]
+    ground = lay_ground(line)
+    problems = [Problem(line, ground, observed, start) for start in starts if start is not None]
+    solutions = [solve(problem, rough) for problem in problems]
+    best = int(np.argmax([solution.log_evidence for solution in solutions]))
+    return problems[best], solutions[best]
 
 
 def _error_scale(problem: Problem, solution: Solution) -> tuple[float, str]:

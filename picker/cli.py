@@ -27,6 +27,10 @@ _ROWS_SHOWN = 60
 _PLACES_SHOWN = 4
 
 
+_POSITIVE = click.FloatRange(min=0, min_open=True)
+_NOT_NEGATIVE = click.FloatRange(min=0)
+
+
 class CommandGroup(click.Group):
     """A group of commands whose exit status is 0 done, 1 findings to look at, 2 unusable input, 130 stopped."""
 
@@ -95,12 +99,12 @@ def _needs_a_look(findings: list[Finding]) -> bool:
 @click.argument("files", nargs=-1, required=True, type=click.Path(path_type=Path), metavar="FILE...")
 @click.option(
     "--sigma-ms",
-    type=click.FloatRange(min=0, min_open=True),
+    type=_POSITIVE,
     help="Standard error of picks that come without one, in milliseconds.",
 )
 @click.option(
     "--interval-us",
-    type=click.FloatRange(min=0, min_open=True),
+    type=_POSITIVE,
     help="Sample interval of the records in microseconds, whatever their headers say.",
 )
 @click.option("--units", type=click.Choice(["m", "ft"]), default="m", show_default=True, help="Lengths as printed.")
@@ -177,7 +181,21 @@ def _echo_loaded(loaded: Loaded, survey: Path, units: str) -> None:
 
 @click.command()
 @survey_argument
-def pick(survey: Path) -> None:
+@click.option("--slowest-m-s", type=_POSITIVE, help="Least apparent velocity of a first arrival, m/s.")
+@click.option("--fastest-m-s", type=_POSITIVE, help="Greatest apparent velocity of a first arrival, m/s.")
+@click.option("--latest-ms", type=_POSITIVE, help="No first arrival is looked for after this time, in milliseconds.")
+@click.option("--time-break-sigma-ms", type=_NOT_NEGATIVE, help="Standard error of a time break, in milliseconds.")
+@click.option("--geophone-sigma-ms", type=_NOT_NEGATIVE, help="Standard error shared by all picks at one geophone.")
+@click.option("--keep-confidence", type=click.FloatRange(0, 1), help="Least probability of a pick that is kept.")
+def pick(
+    survey: Path,
+    slowest_m_s: float | None,
+    fastest_m_s: float | None,
+    latest_ms: float | None,
+    time_break_sigma_ms: float | None,
+    geophone_sigma_ms: float | None,
+    keep_confidence: float | None,
+) -> None:
     """Pick the first arrivals of every record of a survey, with their errors.
 
     What was changed by hand stays on top. The first run compiles the picking, which takes a while once.
@@ -185,6 +203,7 @@ def pick(survey: Path) -> None:
     \b
     Example:
       rockhead pick mill_lane.survey
+      rockhead pick mill_lane.survey --slowest-m-s 200 --fastest-m-s 6000
     """  # noqa: D301 - click wants the character
     from picker.survey import Survey
 
@@ -195,17 +214,42 @@ def pick(survey: Path) -> None:
                 "the survey has no records to pick", file=survey, remedy=f"Load some: rockhead load {survey} FILE..."
             )
         opened.check_files()
-        click.echo("Getting ready; the first run compiles the picking.", err=True)
-        from picker.gather import PickSettings, pick_record
+        replaced = sorted(opened.imported_records() & {header.record for header in headers})
+        click.echo("Getting ready (the first run compiles the picking, once).", err=True)
+        from dataclasses import replace
+
+        from picker.gather import PickSettings, pick_records
 
         settings = PickSettings()
-        with click.progressbar(headers, label="Picking", file=sys.stderr) as bar:
-            for header in bar:
-                opened.store_picks(pick_record(opened.read(header.record), settings), reason=repr(settings))
+        moveout = _given(slowest_m_s=slowest_m_s, fastest_m_s=fastest_m_s)
+        others = _given(
+            latest_s=None if latest_ms is None else latest_ms * 1e-3,
+            time_break_sigma_s=None if time_break_sigma_ms is None else time_break_sigma_ms * 1e-3,
+            geophone_sigma_s=None if geophone_sigma_ms is None else geophone_sigma_ms * 1e-3,
+            keep_confidence=keep_confidence,
+        )
+        try:
+            settings = replace(settings, moveout=replace(settings.moveout, **moveout), **others)
+        except ValueError as error:
+            raise click.UsageError(f"The settings do not go together: {error}.") from error
+        if settings.moveout.slowest_m_s >= settings.moveout.fastest_m_s:
+            raise click.UsageError("--slowest-m-s must be less than --fastest-m-s.")
+        with click.progressbar(length=len(headers), label="Picking", file=sys.stderr) as bar:
+            shots = (opened.read(header.record) for header in headers)
+            table = pick_records(shots, settings, progress=lambda _done: bar.update(1))
+        opened.store_picks(table, reason=repr(settings))
         findings = _echo_picked(opened.picks(), {header.record for header in headers})
+    if replaced:
+        numbers = ", ".join(map(str, replaced))
+        click.echo(f"Imported picks of records {numbers} are replaced; they stay in the log.", err=True)
     echo_findings(findings)
     if _needs_a_look(findings):
         raise click.exceptions.Exit(EXIT_FINDINGS)
+
+
+def _given(**options: float | None) -> dict[str, Any]:
+    """Options that were given."""
+    return {name: value for name, value in options.items() if value is not None}
 
 
 def _echo_picked(picks: PickTable, records: set[int]) -> list[Finding]:

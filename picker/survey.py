@@ -366,6 +366,13 @@ class Survey:
         with self.transaction() as connection:
             return pick_layers.store_base(connection, table, kind, log.next_batch(connection), reason)
 
+    def imported_records(self) -> set[int]:
+        """Records whose present picks under those of persons came in from a file."""
+        rows = self._connection.execute(
+            "SELECT record, kind, MAX(id) FROM log WHERE kind IN ('pick', 'import') GROUP BY record"
+        )
+        return {row["record"] for row in rows if row["kind"] == "import"}
+
     def import_picks(self, table: PickTable, reason: str, *, has_record: bool, has_channel: bool) -> int:
         """Take in picks of another program; records that the survey does not have are added without samples.
 

@@ -255,16 +255,15 @@ def delay(samples: npt.NDArray[np.floating], delay_s: FloatArray, interval_s: fl
     traces, length = samples.shape
     shift = np.asarray(delay_s, dtype=np.float64) / interval_s + before
     whole = np.floor(shift).astype(np.int64)
-    fraction = shift - whole
-    reach = int(np.max(np.maximum(np.abs(whole), np.abs(before - whole)), initial=0)) + SHIFT_HALF_WIDTH + 1
+    taps = np.arange(1 - SHIFT_HALF_WIDTH, SHIFT_HALF_WIDTH + 1)
+    distance = taps - (shift - whole)[:, None]
+    window = np.i0(SHIFT_KAISER_BETA * np.sqrt(np.maximum(1.0 - (distance / SHIFT_HALF_WIDTH) ** 2, 0.0)))
+    kernels = np.sinc(distance) * window / np.i0(SHIFT_KAISER_BETA)
+    reach = int(np.max(np.maximum(np.abs(whole), np.abs(before - whole)), initial=0)) + SHIFT_HALF_WIDTH
     padded = np.pad(np.asarray(samples, dtype=np.float64), ((0, 0), (reach, reach)), mode="edge")
     padded[:, :reach] = 0.0
-    out = np.zeros((traces, before + length))
-    index = np.arange(before + length)
-    for tap in range(-SHIFT_HALF_WIDTH + 1, SHIFT_HALF_WIDTH + 1):
-        distance = tap - fraction
-        window = np.i0(SHIFT_KAISER_BETA * np.sqrt(np.maximum(1.0 - (distance / SHIFT_HALF_WIDTH) ** 2, 0.0)))
-        weight = np.sinc(distance) * window / np.i0(SHIFT_KAISER_BETA)
-        column = index[None, :] - whole[:, None] - tap + reach
-        out += weight[:, None] * np.take_along_axis(padded, column, axis=1)
+    out = np.empty((traces, before + length))
+    for trace in range(traces):
+        first = reach + SHIFT_HALF_WIDTH - 1 - whole[trace]
+        out[trace] = np.convolve(padded[trace], kernels[trace])[first : first + before + length]
     return out

@@ -352,9 +352,13 @@ def simulate_survey(
     receivers = np.atleast_1d(np.asarray(receiver_x_m, dtype=np.float64))
     depths = np.broadcast_to(np.asarray(source_depth_m, dtype=np.float64), sources.shape)
     gathers = []
+    # The simulation's source is a line across the section; waves of a point spread along it as well, by about the root
+    # of the distance. The factor is one a trace: times and shapes stay.
+    spreading = 1.0 / np.sqrt(1.0 + np.abs(sources[:, None] - receivers[None, :]))
     for number, (source, depth) in enumerate(zip(sources, depths, strict=True)):
         gathers.append(
-            simulate(
+            spreading[number, :, None]
+            * simulate(
                 model,
                 float(source),
                 receivers,

@@ -88,7 +88,7 @@ class FieldNoise:
     spiky: int = 0
     spikes_per_s: float = 12.0
     spike_size: float = 15.0
-    air_wave: float = 1.0
+    air_wave: float = 3.0
     air_wave_hz: float = 180.0
     air_decay: float = 1.5
     temperature_c: float = 12.0
@@ -145,7 +145,7 @@ LEVELS = {
         time_break_s=0.1e-3,
         strength_spread=0.1,
         dead=0,
-        air_wave=0.3,
+        air_wave=1.0,
     ),
     "field": FieldNoise(),
     "rough": FieldNoise(
@@ -160,7 +160,7 @@ LEVELS = {
         dead=2,
         reversed=1,
         spiky=1,
-        air_wave=2.0,
+        air_wave=4.0,
     ),
 }
 

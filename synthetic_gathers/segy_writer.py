@@ -18,6 +18,7 @@ FloatArray = npt.NDArray[np.float64]
 IBM_FLOAT, IEEE_FLOAT = 1, 5
 TRACE_LIVE, TRACE_DEAD = 1, 2
 METRES = 1
+UP_IS_NEGATIVE = 1
 REVISION_1 = 0x0100
 # Headers are integers over a power of ten: coordinates to the millimetre on lines, coarser where they would not fit.
 POSITION_SCALARS = (1000, 100, 10, 1)
@@ -139,7 +140,7 @@ def write_segy(
                 BinField.EnsembleFold: 1,
                 BinField.SortingCode: 1,
                 BinField.MeasurementSystem: METRES,
-                BinField.ImpulseSignalPolarity: 2,
+                BinField.ImpulseSignalPolarity: UP_IS_NEGATIVE,
                 BinField.SEGYRevision: REVISION_1 >> 8,
                 BinField.SEGYRevisionMinor: REVISION_1 & 0xFF,
                 BinField.TraceFlag: 1,

@@ -66,7 +66,8 @@ def decode(raw: bytes | mmap.mmap | npt.NDArray[np.uint8], encoding: str) -> npt
     if kind == "ibm4":
         words = np.frombuffer(raw, dtype=f"{order}u4").astype(np.uint32)
         return np.asarray(_ibm_scale()[words >> 24] * (words & 0x00FFFFFF))
-    return np.frombuffer(raw, dtype=f"{order}{kind}").astype(np.float64)
+    with np.errstate(invalid="ignore"):  # signalling not-a-numbers stay not-a-numbers
+        return np.frombuffer(raw, dtype=f"{order}{kind}").astype(np.float64)
 
 
 def read_samples(

@@ -86,6 +86,14 @@ def scan_segy(path: Path, interval_s: float | None = None) -> tuple[list[ShotHea
         )
     words, position, count = words[seismic], position[seismic], count[seismic]
     number = np.flatnonzero(seismic) + 1
+    if not count.any():
+        raise InputError(
+            "has traces without samples",
+            file=path,
+            expected="a sample count of more than 0 in bytes 3221-3222 of the file or 115-116 of a trace header",
+            found="0",
+            remedy="Write the file again",
+        )
     _refuse_degrees(words, number, path)
     findings += _units_findings(header, words, path)
     major, minor = header.revision
@@ -103,7 +111,7 @@ def scan_segy(path: Path, interval_s: float | None = None) -> tuple[list[ShotHea
         source_xyz, source_depth_m, receiver_xyz = _positions(shot, header.feet)
         start_s, found = _start(shot, header, path, record)
         findings += found
-        state = np.where(shot["trace_id"] == _DEAD, "dead", "live")
+        state = np.where((shot["trace_id"] == _DEAD) | (count[rows] == 0), "dead", "live")
         unit_m = METRES_PER_FOOT if header.feet else 1.0
         findings += geometry_findings(
             source_xyz,

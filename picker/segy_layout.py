@@ -7,6 +7,7 @@ standard, and from 0 in the code.
 
 from __future__ import annotations
 
+import math
 import mmap
 import struct
 from dataclasses import dataclass
@@ -143,9 +144,10 @@ def read_file_header(mapped: mmap.mmap, path: Path) -> FileHeader:
     if major >= 1:
         first_trace += _extended_text_bytes(mapped, int(word(3505, "h")), path)
     if major >= 2:
-        interval_us = word(3273, "d") or interval_us
-        samples = word(3269, "i") or samples
-        first_trace = word(3521, "Q") or first_trace
+        extended_us, stated_first = word(3273, "d"), word(3521, "Q")
+        interval_us = extended_us if extended_us > 0 and math.isfinite(extended_us) else interval_us
+        samples = word(3269, "i") if word(3269, "i") > 0 else samples
+        first_trace = stated_first if stated_first >= FILE_HEADER_BYTES else first_trace
         end -= TEXT_BYTES * max(0, int(word(3529, "i")))
         if word(3507, "h") != 0:
             raise InputError(

@@ -260,8 +260,9 @@ def test_a_file_that_ends_after_a_whole_trace_shows_by_its_short_record(put):
         (b"\x55\x3a\x01\x00" + bytes(5000), "is a SEG-2 file, which this version does not read"),
         (b"\x3a\x55\x00\x01" + bytes(5000), "is a SEG-2 file, which this version does not read"),
         (segy([]), "has no traces.*byte 3601"),
+        (segy(spread(samples=0), samples=0), "has traces without samples"),
     ],
-    ids=["empty", "short text", "long text", "other", "noise", "seg2", "seg2 big-endian", "no traces"],
+    ids=["empty", "short text", "long text", "other", "noise", "seg2", "seg2 big-endian", "no traces", "no samples"],
 )
 def test_what_is_no_segy_file_is_refused_and_the_message_says_what_it_is(put, content, message):
     with pytest.raises(InputError, match=f"shot.sgy: {message}"):
@@ -273,6 +274,36 @@ def test_a_folder_and_a_missing_path_are_refused(tmp_path):
         scan_file(tmp_path)
     with pytest.raises(InputError, match="there is no such file"):
         scan_file(tmp_path / "none.sgy")
+
+
+def test_a_trace_without_samples_among_others_is_dead(put):
+    traces = spread(samples=50)
+    traces[2] = spread(samples=0)[2]
+    (record,) = read_records([put(segy(traces, sample_count=0))])
+    npt.assert_array_equal(record.state, ["live", "live", "dead", "live"])
+
+
+def test_no_damage_to_headers_or_length_gives_anything_but_a_record_or_a_message(put):
+    rng = np.random.default_rng(11)
+    whole = segy(spread(record=1) + spread(record=2, source_x=11))
+    places = [*range(3200, 3600), *(3600 + 440 * n + byte for n in range(8) for byte in range(240))]
+    read, messages = 0, []
+    for _ in range(600):
+        damaged = bytearray(whole)
+        # the words that say how the file is laid out are hit more often than their share
+        hit = rng.choice([*places, *([3221, 3225, 3500, 3501, 3505, 3271, 3273, 3527, 3531] * 40)], rng.integers(1, 6))
+        for at in hit.tolist():
+            damaged[at] = int(rng.integers(256))
+        path = put(bytes(damaged[: len(damaged) - (int(rng.integers(900)) if rng.random() < 0.2 else 0)]))
+        try:
+            records = read_records([path])
+        except InputError as error:
+            messages.append(str(error))
+        else:
+            assert all(np.isfinite(record.samples).all() for record in records)
+            read += 1
+    assert all("shot.sgy" in message for message in messages)
+    assert min(read, len(messages)) > 60, "the damage should neither always nor never matter"
 
 
 # geometry

@@ -40,7 +40,7 @@ def _ibm_scale() -> npt.NDArray[np.float64]:
     return np.asarray(sign * 16.0 ** ((byte & 127) - 64.0) / 2.0**24)
 
 
-def decode(raw: bytes | mmap.mmap | npt.NDArray[np.uint8], encoding: str) -> npt.NDArray[np.float64]:
+def decode(raw: bytes, encoding: str) -> npt.NDArray[np.generic]:
     """Numbers from the bytes of a trace.
 
     Parameters
@@ -52,8 +52,9 @@ def decode(raw: bytes | mmap.mmap | npt.NDArray[np.uint8], encoding: str) -> npt
 
     Returns
     -------
-    float64 (samples,)
-        The values as encoded. IBM: (-1)^s 16^(e-64) f / 2^24, exact; unnormalised fractions decode too.
+    array (samples,)
+        The values as encoded, in the number type they are encoded in; IBM: (-1)^s 16^(e-64) f / 2^24, exact in
+        float64, unnormalised fractions too.
 
     Raises
     ------
@@ -66,8 +67,7 @@ def decode(raw: bytes | mmap.mmap | npt.NDArray[np.uint8], encoding: str) -> npt
     if kind == "ibm4":
         words = np.frombuffer(raw, dtype=f"{order}u4").astype(np.uint32)
         return np.asarray(_ibm_scale()[words >> 24] * (words & 0x00FFFFFF))
-    with np.errstate(invalid="ignore"):  # signalling not-a-numbers stay not-a-numbers
-        return np.frombuffer(raw, dtype=f"{order}{kind}").astype(np.float64)
+    return np.frombuffer(raw, dtype=f"{order}{kind}")
 
 
 def read_samples(
@@ -98,7 +98,10 @@ def read_samples(
     with path.open("rb") as file, mmap.mmap(file.fileno(), 0, access=mmap.ACCESS_READ) as mapped:
         for row, (first, count) in enumerate(zip(sample_byte.tolist(), valid.tolist(), strict=True)):
             values = decode(mapped[first : first + count * size], encoding)
-            samples[row, :count] = np.clip(values, -largest, largest)
+            if values.dtype.itemsize == 8:
+                with np.errstate(invalid="ignore"):  # signalling not-a-numbers stay not-a-numbers
+                    values = np.clip(values, -largest, largest)
+            samples[row, :count] = values
     return samples
 
 

@@ -65,6 +65,13 @@ def test_largest_ibm_word_that_float32_holds_does_not_become_infinite_and_larger
 
 
 @pytest.mark.parametrize("order", [">", "<"])
+def test_doubles_that_float32_cannot_hold_stop_at_the_largest_that_it_can(tmp_path, order):
+    content = segy([trace(np.array([1e300, -1e300, 0.1]), 6, order, sample_interval_us=250)], order, 6, 3)
+    record = read_one(tmp_path / "a.sgy", content)
+    npt.assert_allclose(record.samples[0], [LARGEST_FLOAT32, -LARGEST_FLOAT32, 0.1], rtol=1e-7)  # float32 rounding
+
+
+@pytest.mark.parametrize("order", [">", "<"])
 @pytest.mark.parametrize("code", [2, 3, 5, 6, 8, 9])
 def test_integers_and_ieee_floats_read_as_written_in_both_byte_orders(tmp_path, order, code):
     values = np.array([[0, 1, -1, 100, -128, 127]])

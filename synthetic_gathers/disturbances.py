@@ -15,6 +15,8 @@ SOUND_AT_FREEZING_M_S = 331.3
 FREEZING_K = 273.15
 # Mains harmonics relative to the fundamental: odd ones dominate a badly balanced supply (common practice, no source).
 HUM_HARMONICS = ((1, 1.0), (2, 0.15), (3, 0.45), (5, 0.25))
+# A spike of a bad contact dies away with this time constant.
+SPIKE_DECAY_S = 1.5e-3
 # Half width of the windowed-sinc interpolator: at four samples a cycle or more its error is below 1e-5 of the signal.
 SHIFT_HALF_WIDTH = 24
 SHIFT_KAISER_BETA = 9.0
@@ -177,7 +179,7 @@ def spikes(rng: np.random.Generator, traces: int, samples: int, interval_s: floa
     float (traces, samples)
     """
     out = np.zeros((traces, samples))
-    decay = np.exp(-np.arange(samples) * interval_s / 1.5e-3)
+    decay = np.exp(-np.arange(samples) * interval_s / SPIKE_DECAY_S)
     for trace in range(traces):
         for at in rng.integers(0, samples, rng.poisson(spikes_per_s * samples * interval_s)):
             height = rng.choice([-1.0, 1.0]) * rng.lognormal(0.0, 0.5)

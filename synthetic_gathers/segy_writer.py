@@ -123,9 +123,10 @@ def write_segy(
     spec.format = IBM_FLOAT if ibm_float else IEEE_FLOAT
     spec.samples = np.arange(length) * interval_us / 1000.0
     spec.tracecount = sum(record.samples.shape[0] for record in records)
+    text = _textual_header(records, interval_us, ibm_float, description)
     headers = [header for record in records for header in _trace_headers(record, interval_us)]
     with segyio.create(os.fspath(Path(path)), spec) as file:
-        file.text[0] = _textual_header(records, interval_us, bool(ibm_float), description)
+        file.text[0] = text
         file.bin.update(
             {
                 BinField.JobID: 1,

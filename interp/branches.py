@@ -34,6 +34,7 @@ FIRST_SCATTER = 0.03  # departure from straight lines, as a share of the span of
 # sides may differ by so much, as a share of the value, before it is held against them: ground varies, layers dip
 DIRECT_SPREAD, REFRACTED_SPREAD, INTERCEPT_SPREAD = 0.1, 0.25, 0.3
 DIP_SPREAD = 0.08  # apparent slowness differs by sin(dip) / V1: a dip of five degrees either way
+ENOUGH_PICKS = 5.0  # sides with so many picks on a line count alike in what the sides share
 SEEN_LOG_ODDS = 3.0  # twenty to one
 MINUS_TIME_PICKS = 4  # receivers that must see the head wave from both shots
 
@@ -344,11 +345,11 @@ def _learn(sides: list[_Side], scans: list[_Scan], broad: _Shared, before: _Shar
         lines = scan.lines[row]
         far = side.offset.size - best
         if best >= 2:
-            direct.append((lines[0], float(best)))
+            direct.append((lines[0], min(float(best), ENOUGH_PICKS)))
             inside.append(far >= 2)
         if far >= 2:
-            refracted.append((lines[2], float(far)))
-            intercept.append((lines[3] - lines[1], float(far)))
+            refracted.append((lines[2], min(float(far), ENOUGH_PICKS)))
+            intercept.append((lines[3] - lines[1], min(float(far), ENOUGH_PICKS)))
         # two unknowns a line: what they took out of the residuals is put back
         near_weight.append(scan.agreement[row, :best])
         near_residual.append(scan.residual[row, :best] * np.sqrt(best / max(best - 1.0, 1.0)))
@@ -378,7 +379,7 @@ def _shared_value(
         return broad
     value, weight = np.array(found).T
     middle = _weighted_median(value, weight)
-    spread = 2 * 1.4826 * _weighted_median(np.abs(value - middle), weight)
+    spread = 1.4826 * _weighted_median(np.abs(value - middle), weight)
     floor = max(share * abs(middle), least, 1e-3 * broad[1]) * (1 + 2 / len(found))  # one side says little of others
     return middle, float(min(max(spread, floor), broad[1]))
 

@@ -107,8 +107,20 @@ def _needs_a_look(findings: list[Finding]) -> bool:
     type=_POSITIVE,
     help="Sample interval of the records in microseconds, whatever their headers say.",
 )
+@click.option(
+    "--geometry",
+    type=click.Path(path_type=Path),
+    help="Table (.csv) of positions that replace those in the headers: record, channel, source_x_m, receiver_x_m, ...",
+)
 @click.option("--units", type=click.Choice(["m", "ft"]), default="m", show_default=True, help="Lengths as printed.")
-def load(survey: Path, files: tuple[Path, ...], sigma_ms: float | None, interval_us: float | None, units: str) -> None:
+def load(
+    survey: Path,
+    files: tuple[Path, ...],
+    sigma_ms: float | None,
+    interval_us: float | None,
+    geometry: Path | None,
+    units: str,
+) -> None:
     """Load shot records (SEG-Y) and picks (.csv) into a survey file.
 
     The survey file is created where it is not there. Records stay in their files: keep those. Loading the same
@@ -117,6 +129,7 @@ def load(survey: Path, files: tuple[Path, ...], sigma_ms: float | None, interval
     \b
     Example:
       rockhead load mill_lane.survey records/*.sgy
+      rockhead load mill_lane.survey records/*.sgy --geometry positions.csv
       rockhead load mill_lane.survey picks.csv --sigma-ms 1
     """  # noqa: D301 - click wants the character
     from picker.loading import load_files
@@ -126,6 +139,7 @@ def load(survey: Path, files: tuple[Path, ...], sigma_ms: float | None, interval
         files,
         sigma_s=None if sigma_ms is None else sigma_ms * 1e-3,
         interval_s=None if interval_us is None else interval_us * 1e-6,
+        geometry_path=geometry,
     )
     _echo_loaded(loaded, survey, units)
     if _needs_a_look(list(loaded.findings)):

@@ -78,7 +78,7 @@ def geometry_findings(
         text = "all coordinates are zero" + (
             f", though offsets from {offsets.min():g} to {offsets.max():g} m are given." if has_offsets else "."
         )
-        return [Finding("look", text.capitalize(), "Set the coordinates in the headers and load again.", file, record)]
+        return [Finding("look", text.capitalize(), "Load again with a table of positions (--geometry).", file, record)]
     return _offset_findings(
         np.hypot(plan[:, 0] - source_xyz[0], plan[:, 1] - source_xyz[1]),
         np.abs(offset_word_m[live]),
@@ -110,7 +110,7 @@ def _offset_findings(
             "look",
             f"The offset words of {int(wrong.sum())} of {wrong.size} traces contradict the coordinates: "
             f"{word_m[worst]:g} m against {distance_m[worst]:g} m on channel {int(channel[worst])}.",
-            "The coordinates are used; correct whichever is wrong.",
+            "The coordinates are used; if those are wrong, load again with a table of positions (--geometry).",
             file,
             record,
         )
@@ -133,7 +133,7 @@ def _same_place_findings(
             "look",
             f"{int(close.sum())} geophones stand where another one does, first channels {pair[0]} and {pair[1]} "
             f"at x = {x_m:g} m.",
-            "Correct the coordinates in the headers and load again, unless these are several components.",
+            "Load again with a table of positions (--geometry), unless these are several components.",
             file,
             record,
         )

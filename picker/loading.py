@@ -4,16 +4,18 @@ from __future__ import annotations
 
 import os
 import tempfile
-from collections.abc import Callable, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
 from picker import schema
 from picker.errors import InputError
 from picker.findings import Finding
+from picker.geometry_csv import read_geometry_csv
 from picker.picks_csv import PicksFile, read_picks_csv
 from picker.records import ShotHeader, scan_file
-from picker.survey import FileFacts, Survey, file_facts
+from picker.survey import Survey
+from picker.survey_files import FileFacts, file_facts
 
 PICKS_SUFFIXES = (".csv", ".tsv", ".txt")
 _RECORDS_SUFFIXES = (".sgy", ".segy", ".seg", ".sg2", ".seg2", ".dat")
@@ -61,7 +63,7 @@ def load_files(
     files: Sequence[Path],
     sigma_s: float | None = None,
     interval_s: float | None = None,
-    progress: Callable[[Path], None] = lambda path: None,
+    geometry_path: Path | None = None,
 ) -> Loaded:
     """Take files into a survey file, which is created where it is not there.
 
@@ -75,8 +77,8 @@ def load_files(
         Standard error of picks that come without one, seconds.
     interval_s : float, optional
         Sample interval of the records whatever their headers say, seconds.
-    progress : callable, optional
-        Called with each file before it is looked through.
+    geometry_path : Path, optional
+        Table of positions (`picker.geometry_csv`) that replace those of the headers.
 
     Returns
     -------
@@ -95,18 +97,19 @@ def load_files(
             found=survey_path.name,
             remedy="Write: rockhead load NAME.survey FILE...",
         )
+    geometry = None if geometry_path is None else read_geometry_csv(geometry_path)
+    corrected = interval_s is not None or geometry is not None
     scanned: list[_Scanned] = []
     picks: list[PicksFile] = []
     for path in files:
-        progress(path)
         if path.suffix.lower() in PICKS_SUFFIXES:
             picks.append(read_picks_csv(path, sigma_s))
         else:
-            headers, findings = scan_file(path, interval_s)
+            headers, findings = scan_file(path, interval_s, geometry)
             scanned.append(_Scanned(file_facts(path), headers, findings))
     if survey_path.exists():
         with Survey.open(survey_path) as survey:
-            return _take_in(survey, scanned, picks, created=False)
+            return _take_in(survey, scanned, picks, created=False, corrected=corrected)
     if not survey_path.resolve().parent.is_dir():
         raise InputError("there is no such folder", file=survey_path.parent, remedy="Create the folder first")
     return _build(survey_path, scanned, picks)
@@ -125,19 +128,21 @@ def _build(survey_path: Path, scanned: Sequence[_Scanned], picks: Sequence[Picks
     with beside as folder:
         built = Path(folder) / survey_path.name
         with Survey.create(built, folder=survey_path.resolve().parent) as survey:
-            loaded = _take_in(survey, scanned, picks, created=True)
+            loaded = _take_in(survey, scanned, picks, created=True, corrected=False)
         schema.move_file(built, survey_path)
     return loaded
 
 
-def _take_in(survey: Survey, scanned: Sequence[_Scanned], picks: Sequence[PicksFile], *, created: bool) -> Loaded:
+def _take_in(
+    survey: Survey, scanned: Sequence[_Scanned], picks: Sequence[PicksFile], *, created: bool, corrected: bool
+) -> Loaded:
     """Put what was read into a survey in one transaction."""
     new: set[int] = set()
     known_files = []
     findings: list[Finding] = []
     with survey.transaction():
         for file in scanned:
-            numbers = survey.add_file(file.facts, file.headers, file.findings)
+            numbers = survey.add_file(file.facts, file.headers, file.findings, corrected=corrected)
             new.update(numbers)
             if not numbers:
                 known_files.append(file.facts.path)

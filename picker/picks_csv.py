@@ -164,7 +164,7 @@ def read_picks_csv(path: Path, sigma_s: float | None = None) -> PicksFile:
         If the file cannot be read, a column is missing, a cell cannot be understood, a trace comes twice, or picks
         have no error and none is given.
     """
-    rows = CsvRows(path, _own_name, COLUMNS, _NEEDED)
+    rows = CsvRows(path, own_name, COLUMNS, _NEEDED)
     cell = rows.floats
     sigma_missing = "sigma_ms" not in rows.columns
     if sigma_missing and sigma_s is None:
@@ -283,8 +283,8 @@ def _findings(table: PickTable, rows: CsvRows, unknown: int, sigma_s: float | No
     return findings
 
 
-def _own_name(stated: str) -> tuple[str, bool]:
-    """Our name of a column and whether it is in feet: `Shot X (ft)` is source_x_m in feet."""
+def own_name(stated: str) -> tuple[str, bool]:
+    """Translate a heading to our name of the column and whether it is in feet: `Shot X (ft)` is source_x_m in feet."""
     name = re.sub(r"[\s().\[\]]+", "_", stated.strip().lower()).strip("_")
     feet = name.endswith(("_ft", "_feet"))
     base = re.sub(r"_(ft|feet|m)$", "", name)

@@ -19,6 +19,7 @@ from picker.errors import InputError
 
 if TYPE_CHECKING:
     from picker.findings import Finding
+    from picker.geometry_csv import GeometryTable
 
 FloatArray = npt.NDArray[np.float64]
 TRACE_STATES = ("live", "dead", "clipped", "noisy")
@@ -239,7 +240,9 @@ def read_shot(header: ShotHeader) -> ShotRecord:
     )
 
 
-def scan_file(path: str | os.PathLike[str], interval_s: float | None = None) -> tuple[list[ShotHeader], list[Finding]]:
+def scan_file(
+    path: str | os.PathLike[str], interval_s: float | None = None, geometry: GeometryTable | None = None
+) -> tuple[list[ShotHeader], list[Finding]]:
     """Find the shots of one file of records, whatever its format, without reading the samples.
 
     Parameters
@@ -248,6 +251,8 @@ def scan_file(path: str | os.PathLike[str], interval_s: float | None = None) -> 
         The file.
     interval_s : float, optional
         Sample interval to use whatever the headers say, seconds.
+    geometry : GeometryTable, optional
+        Positions to use whatever the headers say.
 
     Returns
     -------
@@ -297,7 +302,7 @@ def scan_file(path: str | os.PathLike[str], interval_s: float | None = None) -> 
             found="the SEG-2 mark 3A55 in its first two bytes",
             remedy="Write it as SEG-Y with the recorder's own program",
         )
-    return scan_segy(place, interval_s)
+    return scan_segy(place, interval_s, geometry)
 
 
 def read_records_and_findings(

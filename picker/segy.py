@@ -16,6 +16,7 @@ import numpy.typing as npt
 from picker.errors import InputError
 from picker.findings import Finding
 from picker.geometry import geometry_findings, scaled
+from picker.geometry_csv import GeometryTable
 from picker.records import ShotHeader
 from picker.samples import looks_like
 from picker.segy_layout import (
@@ -42,7 +43,9 @@ _TRACES_LOOKED_AT = 8
 _SAMPLES_LOOKED_AT = 4000
 
 
-def scan_segy(path: Path, interval_s: float | None = None) -> tuple[list[ShotHeader], list[Finding]]:
+def scan_segy(
+    path: Path, interval_s: float | None = None, geometry: GeometryTable | None = None
+) -> tuple[list[ShotHeader], list[Finding]]:
     """Find the shots of a SEG-Y file without reading its samples.
 
     Parameters
@@ -51,6 +54,8 @@ def scan_segy(path: Path, interval_s: float | None = None) -> tuple[list[ShotHea
         The file.
     interval_s : float, optional
         Sample interval to use whatever the headers say, seconds.
+    geometry : GeometryTable, optional
+        Positions to use whatever the headers say.
 
     Returns
     -------
@@ -63,7 +68,7 @@ def scan_segy(path: Path, interval_s: float | None = None) -> tuple[list[ShotHea
     ------
     InputError
         If the file is no SEG-Y file, ends inside a trace, or has no usable sample interval, no traces of
-        geophones, or positions in degrees.
+        geophones, or positions in degrees that no geometry replaces.
     """
     with path.open("rb") as file, mmap.mmap(file.fileno(), 0, access=mmap.ACCESS_READ) as mapped:
         header = read_file_header(mapped, path)
@@ -94,7 +99,8 @@ def scan_segy(path: Path, interval_s: float | None = None) -> tuple[list[ShotHea
             found="0",
             remedy="Write the file again",
         )
-    _refuse_degrees(words, number, path)
+    if geometry is None:
+        _refuse_degrees(words, number, path)
     findings += _units_findings(header, words, path)
     major, minor = header.revision
     name = f"SEG-Y {major}.{minor}, {_KIND_NAMES.get(kind, kind)}, {_ORDER_NAMES[header.order]}"
@@ -109,6 +115,10 @@ def scan_segy(path: Path, interval_s: float | None = None) -> tuple[list[ShotHea
         order = np.argsort(channel, kind="stable")
         rows, shot, channel = rows[order], shot[order], channel[order]
         source_xyz, source_depth_m, receiver_xyz = _positions(shot, header.feet)
+        if geometry is not None:
+            if np.isin(shot["coordinate_units"], list(_DEGREE_UNITS)).any():
+                source_xyz[:2], receiver_xyz[:, :2] = 0.0, 0.0  # degrees must not stand in for a column left out
+            source_xyz, receiver_xyz = geometry.place(path, record, channel, source_xyz, receiver_xyz)
         start_s, found = _start(shot, header, path, record)
         findings += found
         state = np.where((shot["trace_id"] == _DEAD) | (count[rows] == 0), "dead", "live")
@@ -182,7 +192,7 @@ def _refuse_degrees(words: npt.NDArray[np.void], number: IntArray, path: Path) -
             trace=int(number[first]),
             expected="lengths (code 1 in bytes 89-90 of the trace header)",
             found=f"code {code}, {_DEGREE_UNITS[code]}",
-            remedy="Project the coordinates to metres and write the file again",
+            remedy="Give positions in metres with --geometry, or project the coordinates and write the file again",
         )
 
 
@@ -342,7 +352,9 @@ def _file_findings(headers: list[ShotHeader], path: Path) -> list[Finding]:
     findings = []
     if all(np.all(header.receiver_xyz[:, 2] == 0) and header.source_xyz[2] == 0 for header in headers):
         text = "All elevations are zero: the ground is taken as flat."
-        findings.append(Finding("note", text, "Where it is not, set the elevations and load again.", str(path)))
+        findings.append(
+            Finding("note", text, "Where it is not, load again with a table of positions (--geometry).", str(path))
+        )
     sizes = [header.channel.size for header in headers]
     most = max(set(sizes), key=sizes.count)
     for header in headers:

@@ -5,20 +5,18 @@ Every change is a transaction with its lines in the log. A change that raises le
 
 from __future__ import annotations
 
-import hashlib
 import json
 import os
 import sqlite3
 from collections.abc import Collection, Iterator, Sequence
 from contextlib import contextmanager
-from dataclasses import dataclass
 from pathlib import Path
 from types import TracebackType
 from typing import Any, Self
 
 import numpy as np
 
-from picker import log, pick_layers, record_rows, schema
+from picker import log, pick_layers, record_rows, schema, survey_files
 from picker.errors import InputError
 from picker.findings import Finding
 from picker.log import LogEntry
@@ -26,41 +24,7 @@ from picker.pick_layers import Override
 from picker.pick_places import match_places, records_of_picks
 from picker.picks import PickTable
 from picker.records import ShotHeader, ShotRecord, read_shot
-
-_CHUNK_BYTES = 1 << 20
-
-
-@dataclass(frozen=True)
-class FileFacts:
-    """By what a file is known again: size, time of last change, checksum."""
-
-    path: Path
-    size: int
-    mtime_ns: int
-    sha256: str
-
-
-def file_facts(path: Path) -> FileFacts:
-    """Read a file through for its checksum.
-
-    Raises
-    ------
-    InputError
-        If it cannot be read.
-    """
-    digest = hashlib.sha256()
-    try:
-        with path.open("rb") as file:
-            stat = os.fstat(file.fileno())
-            while chunk := file.read(_CHUNK_BYTES):
-                digest.update(chunk)
-    except OSError as error:
-        raise InputError(
-            f"cannot be read ({error.strerror or error})",
-            file=path,
-            remedy="Put the file back where it was, or check who may read it",
-        ) from error
-    return FileFacts(path, stat.st_size, stat.st_mtime_ns, digest.hexdigest())
+from picker.survey_files import FileFacts
 
 
 class Survey:
@@ -131,7 +95,14 @@ class Survey:
 
     # files and records
 
-    def add_file(self, facts: FileFacts, headers: Sequence[ShotHeader], findings: Sequence[Finding]) -> list[int]:
+    def add_file(
+        self,
+        facts: FileFacts,
+        headers: Sequence[ShotHeader],
+        findings: Sequence[Finding],
+        *,
+        corrected: bool = False,
+    ) -> list[int]:
         """Take in the shots of one file.
 
         Parameters
@@ -142,6 +113,8 @@ class Survey:
             Its shots. A record number that the survey has already is replaced by the next free one.
         findings : sequence of Finding
             What was found in it.
+        corrected : bool
+            True where interval or geometry were given beside the file: they replace those of a known file.
 
         Returns
         -------
@@ -151,106 +124,10 @@ class Survey:
         Raises
         ------
         InputError
-            If the file has changed since it was loaded, or is loaded with another sample interval, and there are
-            picks on its records.
+            If the file has changed since it was loaded, or is corrected, and there are picks on its records.
         """
         with self.transaction() as connection:
-            known = connection.execute("SELECT * FROM file WHERE sha256 = ?", (facts.sha256,)).fetchone()
-            if known is None:
-                known = next(
-                    (row for row in connection.execute("SELECT * FROM file") if self._is_at(row["path"], facts.path)),
-                    None,
-                )
-            batch = log.next_batch(connection)
-            if known is not None:
-                if known["sha256"] == facts.sha256 and self._same_intervals(known["id"], headers):
-                    self._note_place(known, facts, batch)
-                    return []
-                self._forget(known, facts, batch)
-            cursor = connection.execute(
-                "INSERT INTO file (path, size, mtime_ns, sha256, loaded_utc) VALUES (?, ?, ?, ?, ?)",
-                (self._relative(facts.path), facts.size, facts.mtime_ns, facts.sha256, schema.now_utc()),
-            )
-            numbers = record_rows.free_numbers(connection, [header.record for header in headers])
-            for header, number in zip(headers, numbers, strict=True):
-                record_rows.add_record(connection, header, number, cursor.lastrowid)
-            renumbered = dict(zip([header.record for header in headers], numbers, strict=True))
-            connection.executemany(
-                "INSERT INTO finding (file_id, severity, record, channel, text, proposal) VALUES (?, ?, ?, ?, ?, ?)",
-                [
-                    (
-                        cursor.lastrowid,
-                        finding.severity,
-                        renumbered.get(finding.record) if finding.record is not None else None,
-                        finding.channel,
-                        finding.text,
-                        finding.proposal,
-                    )
-                    for finding in findings
-                ],
-            )
-            moved = {str(old): new for old, new in renumbered.items() if old != new}
-            if moved:
-                pairs = ", ".join(f"{old} is {new}" for old, new in moved.items())
-                connection.execute(
-                    "INSERT INTO finding (file_id, severity, text, proposal) VALUES (?, 'note', ?, '')",
-                    (cursor.lastrowid, f"Record numbers that the survey had already are changed: {pairs}."),
-                )
-            new = {"file": self._relative(facts.path), "sha256": facts.sha256, "records": numbers}
-            log.append(connection, batch, "load", new=new)
-            return numbers
-
-    def _relative(self, path: Path) -> str:
-        """Path from the survey file's folder, so that both can be moved together; absolute on another drive."""
-        try:
-            return Path(os.path.relpath(path.resolve(), self._folder)).as_posix()
-        except ValueError:
-            return path.resolve().as_posix()
-
-    def _is_at(self, stored: str, path: Path) -> bool:
-        """Whether a stored path is that of a file."""
-        return stored == self._relative(path)
-
-    def _same_intervals(self, file_id: int, headers: Sequence[ShotHeader]) -> bool:
-        """Whether the records of a file have the sample intervals that it is loaded with now."""
-        rows = self._connection.execute("SELECT interval_s FROM record WHERE file_id = ?", (file_id,))
-        return sorted(row[0] for row in rows) == sorted(header.interval_s for header in headers)
-
-    def _note_place(self, known: sqlite3.Row, facts: FileFacts, batch: int) -> None:
-        """Keep the path, size and time of a known file up to date where the old path leads nowhere any more."""
-        old, new = known["path"], self._relative(facts.path)
-        if old == new:
-            self._connection.execute("UPDATE file SET mtime_ns = ? WHERE id = ?", (facts.mtime_ns, known["id"]))
-        elif not (self._folder / old).exists():
-            self._connection.execute(
-                "UPDATE file SET path = ?, mtime_ns = ? WHERE id = ?", (new, facts.mtime_ns, known["id"])
-            )
-            log.append(self._connection, batch, "relocate", old={"file": old}, new={"file": new})
-
-    def _forget(self, known: sqlite3.Row, facts: FileFacts, batch: int) -> None:
-        """Take out a file that comes again changed, unless work was done on it."""
-        records = [row[0] for row in self._connection.execute("SELECT record FROM record WHERE file_id = ?", known[:1])]
-        for table in ("pick", "override"):
-            worked_on = self._connection.execute(
-                f"SELECT MIN({table}.record) FROM {table} JOIN record USING (record) WHERE file_id = ?", known[:1]
-            ).fetchone()[0]
-            if worked_on is not None:
-                changed = known["sha256"] != facts.sha256
-                raise InputError(
-                    f"was loaded before with {'other content' if changed else 'another sample interval'}"
-                    " and has picks already",
-                    file=facts.path,
-                    record=worked_on,
-                    expected=f"checksum {known['sha256'][:12]}..." if changed else None,
-                    found=f"{facts.sha256[:12]}..." if changed else None,
-                    remedy="Load it into a new survey file",
-                )
-        for table in ("trace", "record", "finding"):
-            owned = "record IN (SELECT record FROM record WHERE file_id = ?)" if table == "trace" else "file_id = ?"
-            self._connection.execute(f"DELETE FROM {table} WHERE {owned}", known[:1])
-        self._connection.execute("DELETE FROM file WHERE id = ?", known[:1])
-        old = {"file": known["path"], "sha256": known["sha256"], "records": records}
-        log.append(self._connection, batch, "load", old=old, reason="loaded again, changed")
+            return survey_files.add_file(connection, self._folder, facts, headers, findings, corrected=corrected)
 
     def records(self) -> list[ShotHeader]:
         """Shots of the survey, by record number, traces by channel; samples are not read."""
@@ -286,42 +163,15 @@ class Survey:
                 "the survey has no such record", file=self.path, record=int(record), remedy="See `rockhead load`"
             )
         if headers[0].has_samples:
-            self._check_unchanged(headers[0])
+            survey_files.check_unchanged(self._connection, headers[0])
         return read_shot(headers[0])
-
-    def _check_unchanged(self, header: ShotHeader) -> None:
-        """Refuse a file that is not what was loaded: by size and time, and where those differ by checksum."""
-        known = self._connection.execute(
-            "SELECT file.* FROM file JOIN record ON record.file_id = file.id WHERE record = ?", (header.record,)
-        ).fetchone()
-        try:
-            stat = header.file.stat()
-        except OSError as error:
-            raise InputError(
-                "the file of the record is gone",
-                file=header.file,
-                record=header.record,
-                remedy="Put it back, or load it from where it is now: the survey knows it again by its content",
-            ) from error
-        if (stat.st_size, stat.st_mtime_ns) == (known["size"], known["mtime_ns"]):
-            return
-        facts = file_facts(header.file)
-        if facts.sha256 != known["sha256"]:
-            raise InputError(
-                "the file has changed since it was loaded",
-                file=header.file,
-                record=header.record,
-                expected=f"{known['size']} bytes with checksum {known['sha256'][:12]}...",
-                found=f"{facts.size} bytes with checksum {facts.sha256[:12]}...",
-                remedy="Put the original back, or load the changed file into a new survey file",
-            )
 
     def check_files(self) -> None:
         """Make sure, before long work, that every file of records is there and unchanged; InputError if not."""
         checked = set()
         for header in self.records():
             if header.has_samples and header.file not in checked:
-                self._check_unchanged(header)
+                survey_files.check_unchanged(self._connection, header)
                 checked.add(header.file)
 
     def findings(self, sha256: Collection[str] | None = None) -> list[Finding]:

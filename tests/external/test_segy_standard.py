@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import csv
-import os
 import struct
 from pathlib import Path
 
@@ -13,10 +12,6 @@ import pytest
 from made_segy import file_header, segy, spread, trace
 
 from picker.records import read_records, scan_file
-
-SHARED = Path(os.environ.get("ROCKHEAD_SHARED", Path(__file__).resolve().parents[2].parent / "shared"))
-SITE_A = SHARED / "field_records" / "site_a" / "segy"
-site_a = pytest.mark.skipif(not SITE_A.is_dir(), reason="the field records of site A are not at hand")
 
 # System/360 single-precision hexadecimal floats. Words with their values as published in the tests of the open reader
 # TGSAI/segy (tests/test_ibm_float.py) and by the definition (-1)^s 16^(e-64) f / 2^24; checked with obspy's decoder.
@@ -41,6 +36,11 @@ IBM_WORDS = {
 }
 IBM_LARGEST_FLOAT32 = 0x60FFFFFF
 LARGEST_FLOAT32 = 3.4028234663852886e38
+
+
+@pytest.fixture
+def site_a(field_records):
+    return field_records / "site_a" / "segy"
 
 
 def read_one(path: Path, content: bytes):
@@ -193,13 +193,12 @@ def test_positions_in_degrees_are_refused(tmp_path, code):
         scan_file(path)
 
 
-@site_a
-def test_field_records_of_site_a_read_with_the_geometry_of_their_table():
-    files = sorted(SITE_A.glob("*.sgy"))
+def test_field_records_of_site_a_read_with_the_geometry_of_their_table(site_a):
+    files = sorted(site_a.glob("*.sgy"))
     records = read_records(files)
     assert len(records) == 40
     assert sum(record.samples.shape[0] for record in records) == 960
-    with (SITE_A / "geometry.csv").open(encoding="utf-8", newline="") as file:
+    with (site_a / "geometry.csv").open(encoding="utf-8", newline="") as file:
         table = {(int(row["record"]), int(row["channel"])): row for row in csv.DictReader(file)}
     for record in records:
         npt.assert_array_equal(record.start_s, -0.1)
@@ -212,10 +211,9 @@ def test_field_records_of_site_a_read_with_the_geometry_of_their_table():
     assert {record.interval_s for record in records} == {0.000125, 0.001}
 
 
-@site_a
-def test_samples_of_site_a_agree_with_segyio_bit_for_bit():
+def test_samples_of_site_a_agree_with_segyio_bit_for_bit(site_a):
     segyio = pytest.importorskip("segyio")
-    for path in sorted(SITE_A.glob("*.sgy")):
+    for path in sorted(site_a.glob("*.sgy")):
         with segyio.open(path, strict=False, ignore_geometry=True) as file:
             npt.assert_array_equal(
                 np.concatenate([record.samples for record in read_records([path])]), file.trace.raw[:]

@@ -5,6 +5,7 @@ A command parses, calls one function and prints. Results go to standard output, 
 
 from __future__ import annotations
 
+import sqlite3
 import sys
 from collections.abc import Sequence
 from pathlib import Path
@@ -46,6 +47,8 @@ class CommandGroup(click.Group):
             raise _Unusable(error.format_message()) from error
         except BrokenPipeError:
             raise
+        except sqlite3.Error as error:
+            raise _Unusable(f"the survey file is damaged ({error}). Put a copy in its place.") from error
         except OSError as error:
             place = f"{error.filename}: " if error.filename else ""
             raise _Unusable(f"{place}{error.strerror or error}.") from error

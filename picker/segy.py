@@ -39,6 +39,9 @@ _DEGREE_UNITS = {2: "seconds of arc", 3: "decimal degrees", 4: "degrees, minutes
 _TIMES_SCALARS = (-10000, -1000, -100, -10, -1, 0, 1, 10, 100, 1000, 10000)
 # Recorders sample at 1/16, 1/32 ... ms; a word of whole microseconds cuts the fraction off. Common practice, no source.
 _CUT_INTERVALS_US = {62: 62.5, 31: 31.25, 15: 15.625}
+# Refraction records last from some ten milliseconds to some ten seconds; far outside, the interval is in another unit
+# than microseconds. Common practice, no source.
+_SHORTEST_S, _LONGEST_S = 0.005, 60.0
 _TRACES_LOOKED_AT = 8
 _SAMPLES_LOOKED_AT = 4000
 
@@ -108,7 +111,7 @@ def scan_segy(
     headers: list[ShotHeader] = []
     for rows, record, original in _shots(words):
         shot = words[rows]
-        interval, found = _interval(shot, number[rows], header, interval_s, path, record)
+        interval, found = _interval(shot, number[rows], int(count[rows].max()), header, interval_s, path, record)
         findings += found
         channel, found = _channels(shot, path, record)
         findings += found
@@ -254,12 +257,16 @@ def _trace_keys(words: npt.NDArray[np.void]) -> list[tuple[int, int, int]]:
 def _interval(
     shot: npt.NDArray[np.void],
     number: IntArray,
+    longest: int,
     header: FileHeader,
     given_s: float | None,
     path: Path,
     record: int,
 ) -> tuple[float, list[Finding]]:
-    """Sample interval of a shot, seconds: the one given, else that of its traces, else that of the file header."""
+    """Sample interval of a shot, seconds: the one given, else that of its traces, else that of the file header.
+
+    `number` are the traces' numbers in the file, `longest` the most samples that one has.
+    """
     if given_s is not None:
         return given_s, []
     of_traces = sorted(set(shot["interval_us"][shot["interval_us"] > 0].tolist()))
@@ -292,6 +299,10 @@ def _interval(
         )
         severity = "look" if header.interval_us > 0 else "note"
         findings.append(Finding(severity, text, "Where it is wrong, give --interval-us.", str(path), record))
+    length_s = interval_us * 1e-6 * longest
+    if not _SHORTEST_S <= length_s <= _LONGEST_S:
+        text = f"At {interval_us:g} us a sample the record is {length_s:g} s long, which no refraction record is."
+        findings.append(Finding("look", text, "If the interval is wrong, give --interval-us.", str(path), record))
     if interval_us in _CUT_INTERVALS_US:
         whole = _CUT_INTERVALS_US[int(interval_us)]
         text = f"A sample interval of {interval_us:g} us is perhaps {whole:g} us with its fraction cut off."

@@ -149,6 +149,15 @@ def test_every_wrong_command_ends_with_2_and_says_why(folder, arguments, message
     assert sorted(os.listdir(folder)) == before
 
 
+def test_a_damaged_survey_file_ends_with_2_and_one_message(folder):
+    (folder / "many.sgy").write_bytes(segy([one for record in range(1, 200) for one in spread(record=record)]))
+    run("load", "line.survey", "many.sgy")
+    torn = bytearray((folder / "line.survey").read_bytes())
+    torn[20000:60000] = bytes(40000)
+    (folder / "line.survey").write_bytes(bytes(torn))
+    assert "Error: the survey file is damaged" in run("pick", "line.survey", status=2).stderr
+
+
 @pytest.mark.skipif(os.geteuid() == 0 if hasattr(os, "geteuid") else True, reason="root may read everything")
 def test_a_file_that_may_not_be_read_ends_with_2(folder):
     (folder / "shot.sgy").chmod(0)
@@ -302,6 +311,11 @@ def group_that_raises(error: BaseException) -> click.Group:
         (PermissionError(13, "Permission denied", "a.csv"), 2, "Error: a.csv: Permission denied.\n"),
         (click.FileError("a.csv", "gone"), 2, "Error: Could not open file 'a.csv': gone\n"),
         (KeyboardInterrupt(), 130, "Stopped. What was reported as done is kept.\n"),
+        (
+            sqlite3.DatabaseError("database disk image is malformed"),
+            2,
+            "Error: the survey file is damaged (database disk image is malformed). Put a copy in its place.\n",
+        ),
         (click.Abort(), 130, "Stopped. What was reported as done is kept.\n"),
         (click.exceptions.Exit(1), 1, ""),
     ],

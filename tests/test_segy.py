@@ -138,6 +138,14 @@ def test_interval_whose_fraction_is_cut_off_is_pointed_out(put):
     assert any("62.5 us" in text for text in texts(findings, "look"))
 
 
+@pytest.mark.parametrize("interval_us", [1, 32000])
+def test_a_record_of_impossible_length_is_pointed_out(put, interval_us):
+    words = {"sample_interval_us": interval_us}
+    long = segy(spread(samples=3000, **words), samples=3000, **words)
+    _, findings = scan_file(put(long))
+    assert any(f"At {interval_us} us a sample" in text for text in texts(findings, "look"))
+
+
 def test_two_sample_intervals_in_one_file_stay_with_their_records(put):
     path = put(segy(spread(record=1) + spread(record=2, sample_interval_us=500)))
     headers, _ = scan_file(path)

@@ -186,14 +186,22 @@ def _echo_loaded(loaded: Loaded, survey: Path, units: str) -> None:
         for line in _table((*titles, "start (ms)", "dead"), rows):
             click.echo(line.rstrip())
         if len(loaded.records) > len(rows):
-            click.echo(f"... and {len(loaded.records) - len(rows)} records more")
+            click.echo(f"... and {_count(len(loaded.records) - len(rows), 'record')} more")
     for path in loaded.known_files:
         click.echo(f"{path.name}: in the survey already, nothing changed")
     echo_findings(list(loaded.findings))
-    done = [f"{len(loaded.new)} records"] * bool(loaded.records) + [f"{loaded.picks_changed} picks"] * (
-        bool(loaded.picks_changed) or not loaded.records
-    )
-    click.echo(f"{'Created' if loaded.created else 'Updated'} {survey}: {' and '.join(done)} loaded.")
+    done = [
+        _count(number, what) for number, what in ((len(loaded.new), "record"), (loaded.picks_changed, "pick")) if number
+    ]
+    if done:
+        click.echo(f"{'Created' if loaded.created else 'Updated'} {survey}: {' and '.join(done)} loaded.")
+    else:
+        click.echo(f"Nothing new: {survey} is as it was.")
+
+
+def _count(number: int, what: str) -> str:
+    """Number of things in words."""
+    return f"{number} {what}" if number == 1 else f"{number} {what}s"
 
 
 @click.command()
@@ -297,7 +305,7 @@ def _echo_picked(picks: PickTable, records: set[int]) -> list[Finding]:
     for line in _table(("record", "kept", "none", "dropped", "by hand", "median sigma (ms)"), rows[:_ROWS_SHOWN]):
         click.echo(line.rstrip())
     if len(rows) > _ROWS_SHOWN:
-        click.echo(f"... and {len(rows) - _ROWS_SHOWN} records more")
+        click.echo(f"... and {_count(len(rows) - _ROWS_SHOWN, 'record')} more")
     kept = picks.kept & np.isin(picks.record, sorted(records))
     total = f"{int(kept.sum())} picks kept of {int(np.isin(picks.record, sorted(records)).sum())} traces"
     if kept.any():

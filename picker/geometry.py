@@ -131,7 +131,7 @@ def _same_place_findings(
     return [
         Finding(
             "look",
-            f"{int(close.sum())} geophones stand where another one does, first channels {pair[0]} and {pair[1]} "
+            f"Geophones that stand where another one does: {int(close.sum())}, first channels {pair[0]} and {pair[1]} "
             f"at x = {x_m:g} m.",
             "Load again with a table of positions (--geometry), unless these are several components.",
             file,

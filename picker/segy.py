@@ -82,7 +82,7 @@ def scan_segy(
     seismic = ~np.isin(words["trace_id"], list(_AUXILIARY))
     if not seismic.all():
         names = sorted({_AUXILIARY[int(code)] for code in words["trace_id"][~seismic]})
-        text = f"{int((~seismic).sum())} auxiliary traces ({', '.join(names)}) are left out."
+        text = f"Auxiliary traces left out: {int((~seismic).sum())} ({', '.join(names)})."
         findings.append(Finding("note", text, file=str(path)))
     if not seismic.any():
         raise InputError(
@@ -377,8 +377,8 @@ def _file_findings(headers: list[ShotHeader], path: Path) -> list[Finding]:
         numbers = ", ".join(str(header.record) for header in renumbered)
         originals = sorted({header.original_record for header in renumbered})
         text = (
-            f"{len(renumbered)} shots carry a record number that was taken or not set "
-            f"({', '.join(map(str, originals))}); they are records {numbers} here."
+            f"Shots with a record number that was taken or not set ({', '.join(map(str, originals))}): "
+            f"they are records {numbers} here."
         )
         findings.append(Finding("note", text, file=str(path)))
     return findings

@@ -51,10 +51,11 @@ def test_load_prints_a_line_a_record_and_what_was_done(folder):
     header, line, done = result.stdout.splitlines()
     assert header.split("  ")[0] == "record"
     assert line.split() == ["1", "-5.0", "4", "0.0", "to", "6.0", "0.25", "50", "0"]
-    assert done == "Created line.survey: 1 records loaded."
+    assert done == "Created line.survey: 1 record loaded."
     assert result.stderr == ""
     again = run("load", "line.survey", "shot.sgy")
     assert "in the survey already, nothing changed" in again.stdout
+    assert again.stdout.splitlines()[-1] == "Nothing new: line.survey is as it was."
 
 
 def test_load_prints_feet_where_they_are_asked_for(folder):
@@ -85,7 +86,7 @@ def test_picks_are_loaded_with_an_error_given_and_go_onto_the_records(folder):
     assert "Error: file picks.csv: the picks come without errors" in message
     assert not (folder / "line.survey").exists()
     result = run("load", "line.survey", "picks.csv", "shot.sgy", "--sigma-ms", "0.5")
-    assert "1 records and 2 picks loaded" in result.stdout
+    assert "1 record and 2 picks loaded" in result.stdout
     with Survey.open("line.survey") as survey:
         assert len(survey.records()) == 1
         assert survey.picks().sigma_s.tolist() == [0.0005, 0.0005]

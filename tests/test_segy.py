@@ -61,7 +61,10 @@ def test_shots_at_two_places_under_one_number_become_two_records(put):
     assert [header.record for header in headers] == [1, 2]
     assert [header.original_record for header in headers] == [1, 1]
     assert [header.source_xyz[0] for header in headers] == [-5, 11]
-    assert any("1 shots carry a record number that was taken" in text for text in texts(findings, "note"))
+    assert any(
+        "Shots with a record number that was taken or not set (1): they are records 2 here." in text
+        for text in texts(findings, "note")
+    )
 
 
 def test_repeats_at_one_place_under_one_number_become_records_of_their_own(put):
@@ -94,7 +97,7 @@ def test_dead_traces_are_marked_and_auxiliary_ones_left_out(put):
     (header,), findings = scan_file(put(segy([*spread(), dead, time_break])))
     npt.assert_array_equal(header.state, ["live"] * 4 + ["dead"])
     assert header.source_xyz[0] == -5
-    assert any("1 auxiliary traces (time break)" in text for text in texts(findings))
+    assert any("Auxiliary traces left out: 1 (time break)." in text for text in texts(findings))
 
 
 def test_a_file_with_auxiliary_traces_only_is_refused(put):
@@ -358,7 +361,8 @@ def test_geophones_at_one_place_are_found(put):
     traces[3] = spread(group_x=4)[3]
     _, findings = scan_file(put(segy(traces)))
     assert any(
-        "1 geophones stand where another one does, first channels 3 and 4 at x = 4 m" in t for t in texts(findings)
+        "Geophones that stand where another one does: 1, first channels 3 and 4 at x = 4 m" in t
+        for t in texts(findings)
     )
 
 

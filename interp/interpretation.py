@@ -10,6 +10,7 @@ from itertools import product
 import numpy as np
 import numpy.typing as npt
 from scipy.special import expit
+from threadpoolctl import threadpool_limits
 
 from interp.branches import assign_branches
 from interp.control import Control, control_of_stations, least_depth_m
@@ -81,8 +82,14 @@ def interpret(
     ValueError
         If the picks cannot carry a two-layer solution; the text says what is missing.
     """
-    settings = settings or InterpretSettings()
-    used = _usable(picks)
+    # the matrices are small: more threads would only wait for each other, and add up in another order
+    with threadpool_limits(limits=1, user_api="blas"):
+        return _interpret(_usable(picks), settings or InterpretSettings(), progress)
+
+
+def _interpret(
+    used: PickTable, settings: InterpretSettings, progress: Callable[[int, int], None] | None
+) -> DepthSection:
     line = lay_out_line(used)
     warnings = []
     if np.any(line.broadside):

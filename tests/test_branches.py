@@ -223,6 +223,35 @@ def test_intercept_errors_cover_the_truth_over_a_flat_refractor():
     assert abs(np.mean(scores)) < 0.4
 
 
+@pytest.mark.slow
+def test_wild_picks_and_uneven_ground_alone_do_not_make_a_refractor():
+    # 60 m deep below 46 m of spread: never a first arrival; one in a hundred of twenty-to-one odds may still be wrong
+    seen = []
+    for seed in range(20):
+        rng = np.random.default_rng(seed)
+        shot, place, receiver, time, _ = flat_survey([-1.0, 11.0, 23.0, 35.0, 47.0], np.arange(0.0, 46.1, 2.0), 60.0)
+        uneven = 600 * 0.1 / 600 * 40 / (2 * np.pi) / 600  # velocity varies by 10 % over 40 m
+        time = time + np.abs(uneven * (np.cos(2 * np.pi * receiver / 40) - np.cos(2 * np.pi * place / 40)))
+        wild = rng.random(time.size) < 0.1
+        time = time + 5e-4 * rng.standard_normal(time.size) + wild * rng.uniform(-0.02, 0.02, time.size)
+        seen.append(assign_branches(shot, place, receiver, time, np.full(time.size, 5e-4), 0.95, 2e-4).refractor_seen)
+    assert np.mean(seen) <= 0.05
+
+
+def test_a_third_layer_counts_with_the_head_wave_and_shows_as_scatter_about_its_line():
+    rng = np.random.default_rng(1)
+    shot, place, receiver, *_ = flat_survey([-1.0, 23.0, 47.0, 71.0, 95.0], np.arange(0.0, 94.1, 2.0))
+    time, branch = tt.first_arrival_time(np.abs(receiver - place), [3, 12], [400, 1500, 4000])
+    assert set(branch) == {0, 1, 2}
+    found = assign_branches(
+        shot, place, receiver, time + 3e-4 * rng.standard_normal(time.size), np.full(time.size, 3e-4)
+    )
+    assert np.mean((found.branch > 0) != (branch > 0)) < 0.02  # beside the crossover only
+    assert found.velocity_1_m_s == pytest.approx(400, rel=0.02)
+    assert found.scatter_refracted_s > 3 * found.scatter_direct_s
+    assert 1500 < found.velocity_2_m_s < 4000
+
+
 @pytest.mark.parametrize(
     ("change", "text"),
     [
@@ -230,6 +259,7 @@ def test_intercept_errors_cover_the_truth_over_a_flat_refractor():
         ({"confidence": 1.5}, "confidence"),
         ({"time_s": [0.1, np.nan, 0.2, 0.3]}, "finite"),
         ({"receiver_along_m": [0.0, 0.0, 1.0, 2.0]}, "at least three picks"),
+        ({"time_s": [0.0, 0.0, 0.0, 0.0]}, "grow with offset"),
         ({"time_s": [0.1, 0.2]}, "broadcast|shape"),
     ],
 )

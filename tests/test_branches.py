@@ -230,8 +230,9 @@ def test_wild_picks_and_uneven_ground_alone_do_not_make_a_refractor():
     for seed in range(20):
         rng = np.random.default_rng(seed)
         shot, place, receiver, time, _ = flat_survey([-1.0, 11.0, 23.0, 35.0, 47.0], np.arange(0.0, 46.1, 2.0), 60.0)
-        uneven = 600 * 0.1 / 600 * 40 / (2 * np.pi) / 600  # velocity varies by 10 % over 40 m
-        time = time + np.abs(uneven * (np.cos(2 * np.pi * receiver / 40) - np.cos(2 * np.pi * place / 40)))
+        # slowness varies by 10 % with a wave length of 40 m along the line: its integral from shot to receiver
+        wave = np.cos(2 * np.pi * place / 40 + seed) - np.cos(2 * np.pi * receiver / 40 + seed)
+        time = time + np.sign(receiver - place) * 0.1 / 600 * 40 / (2 * np.pi) * wave
         wild = rng.random(time.size) < 0.1
         time = time + 5e-4 * rng.standard_normal(time.size) + wild * rng.uniform(-0.02, 0.02, time.size)
         seen.append(assign_branches(shot, place, receiver, time, np.full(time.size, 5e-4), 0.95, 2e-4).refractor_seen)
@@ -246,8 +247,11 @@ def test_a_third_layer_counts_with_the_head_wave_and_shows_as_scatter_about_its_
     found = assign_branches(
         shot, place, receiver, time + 3e-4 * rng.standard_normal(time.size), np.full(time.size, 3e-4)
     )
-    assert np.mean((found.branch > 0) != (branch > 0)) < 0.02  # beside the crossover only
-    assert found.velocity_1_m_s == pytest.approx(400, rel=0.02)
+    wrong = (found.branch > 0) != (branch > 0)
+    (first, _) = tt.crossover_distances([3, 12], [400, 1500, 4000])
+    assert np.all(np.abs(np.abs(receiver - place)[wrong] - first) < 2.0)  # none but the pick beside the crossover
+    # one line through both head waves meets the direct wave farther out, so that a head-wave pick is taken as direct
+    assert found.velocity_1_m_s == pytest.approx(400, rel=0.06)
     assert found.scatter_refracted_s > 3 * found.scatter_direct_s
     assert 1500 < found.velocity_2_m_s < 4000
 

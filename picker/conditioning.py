@@ -93,10 +93,10 @@ def block_means(samples: npt.NDArray[np.floating], factor: int) -> FloatArray:
 
 
 def remove_offset(samples: FloatArray, first: IntArray, stop: IntArray) -> FloatArray:
-    """Take off each trace's mean over samples first..stop-1 (its first sample where that is empty)."""
+    """Take off each trace's mean over samples first..stop-1 (the median of all where those are fewer than 8)."""
     out = np.array(samples)
     for row, (begin, end) in enumerate(zip(first.tolist(), stop.tolist(), strict=True)):
-        out[row] -= out[row, begin:end].mean() if end > begin else out[row, 0]
+        out[row] -= out[row, begin:end].mean() if end - begin >= 8 else np.median(out[row])
     return out
 
 
@@ -206,7 +206,45 @@ def fit_noise(samples: FloatArray, first: IntArray, stop: IntArray, order: int) 
 
 
 def whiten(samples: FloatArray, noise: Noise) -> FloatArray:
-    """Traces through the prediction-error filter, in units of each trace's noise level; the same shape."""
+    """Traces through the prediction-error filter, in units of each trace's noise level; the same shape.
+
+    Before its start a trace is taken to have been constant, so that the filter does not ring there.
+    """
     from scipy.signal import lfilter
 
-    return np.asarray(lfilter(noise.prediction_error, [1.0], samples, axis=1) / noise.level[:, np.newaxis])
+    order = noise.prediction_error.size - 1
+    led = np.concatenate([np.repeat(samples[:, :1], order, axis=1), samples], axis=1)
+    return np.asarray(lfilter(noise.prediction_error, [1.0], led, axis=1)[:, order:] / noise.level[:, np.newaxis])
+
+
+def quiet_start(samples: FloatArray, share: float) -> IntArray:
+    """How many samples at the start of each trace stay below `share` of its largest magnitude; int (traces,)."""
+    magnitude = np.abs(samples)
+    loud = magnitude > share * magnitude.max(axis=1, keepdims=True)
+    return np.where(loud.any(axis=1), loud.argmax(axis=1), samples.shape[1]).astype(np.int64)
+
+
+def recent_level(samples: FloatArray, noise: Noise, row: int, stop: int, window: int) -> float:
+    """Noise level of one trace just before an arrival, or over all its noise where that is larger.
+
+    Parameters
+    ----------
+    samples : float (samples,)
+        The trace; `row` is its row in `noise`.
+    noise : Noise
+        Of the record.
+    row, stop, window : int
+        The `window` samples before sample `stop` count; fewer than half of them, and nothing changes.
+
+    Returns
+    -------
+    float
+        Standard deviation behind the filter: wind and traffic do not keep to the time before the shot.
+    """
+    order = noise.prediction_error.size - 1
+    begin = max(order, stop - window)
+    level = float(noise.level[row])
+    if stop - begin < window // 2:
+        return level
+    filtered = np.convolve(samples[begin - order : stop], noise.prediction_error, mode="valid")
+    return max(level, float(np.sqrt(np.mean(filtered**2))))

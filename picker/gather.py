@@ -13,10 +13,21 @@ from dataclasses import dataclass, field
 import numpy as np
 import numpy.typing as npt
 
-from picker.conditioning import Noise, block_means, fit_noise, remove_mains_hum, remove_offset, trace_states, whiten
-from picker.moveout import Moveout, path_posterior
+from picker.conditioning import (
+    block_means,
+    fit_noise,
+    quiet_start,
+    recent_level,
+    remove_mains_hum,
+    remove_offset,
+    trace_states,
+    whiten,
+)
+from picker.late_bias import CalibratedOnset, calibrate
+from picker.moveout import Moveout, path_posterior, smooth_times
 from picker.onsets import change_scores
 from picker.picks import PickTable
+from picker.reading import blocks_for_reading, prepare, read_onset, weighted_quantiles
 from picker.records import ShotRecord
 
 FloatArray = npt.NDArray[np.float64]
@@ -65,9 +76,26 @@ class PickSettings:
 _ONSET_S = 0.008
 # Likelihoods are damped by this: samples of a band-limited signal are not independent, nor is the model exact.
 _DAMPING = 0.8
-# Prior chance that an arrival is too weak to be seen, and weight of the best onset given to every time (a gust).
-_UNSEEN = 0.05
+# Prior chance that a first arrival is too weak to be seen: at the shot, and at the far end of the spread; and the
+# weight that every time has whatever the trace shows (a gust before the arrival).
+_UNSEEN_NEAR = 0.02
+_UNSEEN_FAR = 0.15
 _OUTLIER = 1e-6
+# Mean size of what the soil under one geophone adds or takes.
+_STATIC_S = 8e-4
+# Onsets this close to one another are the same arrival.
+_CLUSTER_S = 0.004
+# Noise enough to know it, and how far it keeps from an arrival.
+_ENOUGH_NOISE_S = 0.03
+_MARGIN_S = 0.004
+# A trace without pre-trigger samples is taken for noise until it reaches this share of its peak.
+_QUIET_SHARE = 0.01
+# How well the neighbours know an onset at best, how often not at all, and how late it is where strength finds it.
+_NEIGHBOUR_SIGMA_S = 0.001
+_OFF_THE_PATH = 0.02
+_USUALLY_LATE_S = 0.001
+# Readings better than this are clear.
+_CLEAR_S = 0.001
 
 
 def _sides(record: ShotRecord) -> IntArray:
@@ -79,25 +107,31 @@ def _sides(record: ShotRecord) -> IntArray:
 
 
 @dataclass(frozen=True, eq=False)
-class Coarse:
-    """Where the first arrivals of a record are, at the coarse sample interval; arrays (traces,)."""
+class Arrivals:
+    """Where the first arrivals of a record are, at the coarse sample interval; arrays (traces,).
+
+    `time_s` and `confidence` use all traces, `expected_s` and `expected_sigma_s` all traces but the trace itself.
+    """
 
     time_s: FloatArray
-    spread_s: FloatArray
     confidence: FloatArray
-    noise: Noise
+    expected_s: FloatArray
+    expected_sigma_s: FloatArray
 
 
-def _noise_stop(record: ShotRecord, factor: int, settings: PickSettings) -> IntArray:
-    """First block of each trace that may hold an arrival."""
+def _earliest(record: ShotRecord, interval_s: float, count: int, settings: PickSettings) -> IntArray:
+    """First sample of each trace that may hold an arrival, for traces of `count` samples at this interval."""
     earliest = record.offset_m / settings.moveout.fastest_m_s - settings.slack_s
-    blocks = np.floor((earliest - record.start_s) / (record.interval_s * factor))
-    return np.clip(blocks, 0, record.samples.shape[1] // factor).astype(np.int64)
+    return np.clip(np.floor((earliest - record.start_s) / interval_s), 0, count).astype(np.int64)
 
 
 def find_arrivals(
-    samples: FloatArray, record: ShotRecord, live: npt.NDArray[np.bool_], settings: PickSettings
-) -> Coarse:
+    samples: FloatArray,
+    record: ShotRecord,
+    live: npt.NDArray[np.bool_],
+    noise_stop_s: FloatArray,
+    settings: PickSettings,
+) -> Arrivals:
     """Find the first arrivals of a record from all its traces together.
 
     Parameters
@@ -108,45 +142,49 @@ def find_arrivals(
         Their clock and geometry.
     live : bool (traces,)
         Traces to be used.
+    noise_stop_s : float (traces,)
+        Before this time each trace is noise.
     settings : PickSettings
         What is assumed.
 
     Returns
     -------
-    Coarse
-        Times to about the coarse interval; NaN on traces that are not live.
+    Arrivals
+        Times to about the coarse interval; NaN and confidence 0 on traces that are not live.
     """
     factor = max(1, round(settings.coarse_s / record.interval_s))
     interval_s = factor * record.interval_s
     blocks = block_means(samples, factor)
-    zero = np.zeros(record.samples.shape[0], dtype=np.int64)
-    stop = _noise_stop(record, factor, settings)
-    noise = fit_noise(blocks, zero, stop, settings.noise_order)
-    white = whiten(blocks, noise)
-    scores = change_scores(white, stop, round(_ONSET_S / interval_s))
-    traces, times = blocks.shape
+    traces, count = blocks.shape
+    earliest = _earliest(record, interval_s, count, settings)
+    stop = np.clip((noise_stop_s - record.start_s) / interval_s, 0, count).astype(np.int64)
+    noise = fit_noise(blocks, np.zeros(traces, dtype=np.int64), np.where(live, stop, 0), settings.noise_order)
+    scores = change_scores(whiten(blocks, noise), earliest, round(_ONSET_S / interval_s))
     last = min(
-        float(record.start_s.max()) + times * interval_s,
+        float(record.start_s.max()) + count * interval_s,
         settings.latest_s,
         float(record.offset_m.max()) / settings.moveout.slowest_m_s + settings.slack_s,
     )
     origin = float(record.start_s.min())
     skip = max(0, int(np.floor((-settings.slack_s - origin) / interval_s)))
     grid = origin + interval_s * np.arange(skip, max(skip + 2, int(np.ceil((last - origin) / interval_s))))
-    time_s = np.full(traces, np.nan)
-    spread_s = np.full(traces, np.nan)
-    confidence = np.zeros(traces)
-    likelihood, seen = _likelihoods(scores, stop, record, grid, interval_s, factor)
+    likelihood, seen = _likelihoods(scores, earliest, record, grid, interval_s, factor)
+    result = Arrivals(*(np.full(traces, np.nan) for _ in range(4)))
+    result.confidence[:] = 0.0
     side = _sides(record)
     for way in (-1, 1):
         rows = np.flatnonzero(live & (side == way))
         rows = rows[np.argsort(record.offset_m[rows], kind="stable")]
         if rows.size == 0:
             continue
-        posterior = path_posterior(likelihood[rows], record.offset_m[rows], grid, settings.moveout, settings.slack_s)
-        for row, weights in zip(rows.tolist(), posterior, strict=True):
-            time_s[row], spread_s[row], confidence[row] = _summary(grid, weights, seen[row])
-    return Coarse(time_s, spread_s, confidence, noise)
+        # the path stands for the ground; each trace is off it by the soil under its own geophone
+        lent = smooth_times(likelihood[rows], interval_s, _STATIC_S)
+        posterior = path_posterior(lent, record.offset_m[rows], grid, settings.moveout, settings.slack_s)
+        expected = smooth_times(posterior / lent, interval_s, _STATIC_S)
+        for row, others in zip(rows.tolist(), expected, strict=True):
+            if others.sum() > 0:
+                _summarise(result, row, grid, others / others.sum(), likelihood[row], seen[row])
+    return result
 
 
 def _likelihoods(
@@ -154,6 +192,9 @@ def _likelihoods(
 ) -> tuple[FloatArray, FloatArray]:
     """Likelihood (traces, grid) of an onset at each time, and the share of it that the trace itself shows."""
     likelihood = np.empty((scores.shape[0], grid.size))
+    reach = max(1, round(_CLUSTER_S / interval_s))
+    share = record.offset_m / max(float(record.offset_m.max()), 1e-9)
+    unseen = _UNSEEN_NEAR + (_UNSEEN_FAR - _UNSEEN_NEAR) * share**2
     seen = np.empty_like(likelihood)
     for row in range(scores.shape[0]):
         last = int(record.valid[row]) // factor if record.valid is not None else scores.shape[1] - 1
@@ -162,39 +203,90 @@ def _likelihoods(
         score = _DAMPING * scores[row, np.clip(position, 0, scores.shape[1] - 1)]
         score = np.where(inside, score, -np.inf)
         top = max(float(score.max()), _DAMPING * float(scores[row, last]))
-        shown = (1 - _UNSEEN) * np.exp(score - top)
-        floor = max(_UNSEEN * np.exp(_DAMPING * float(scores[row, last]) - top), _OUTLIER)
-        likelihood[row] = shown + floor
-        seen[row] = shown / likelihood[row]
+        shown = (1 - unseen[row]) * np.exp(score - top)
+        # an arrival too weak to be seen leaves the trace looking like noise until whatever comes next
+        later = np.maximum.accumulate(np.append(shown, np.exp(_DAMPING * float(scores[row, last]) - top))[::-1])[::-1]
+        likelihood[row] = shown + np.maximum(unseen[row] * later[1:], _OUTLIER)
+        # what comes within a cluster of it is the same arrival, not a later one
+        after = np.append(later[1 + reach :], np.full(min(reach, grid.size), later[-1]))[: grid.size]
+        seen[row] = shown / (shown + np.maximum(unseen[row] * after, _OUTLIER))
     return likelihood, seen
 
 
-def _summary(grid: FloatArray, weights: FloatArray, seen: FloatArray) -> tuple[float, float, float]:
-    """Time, spread and confidence of a posterior: its most likely cluster that the trace itself shows."""
-    shown = weights * seen
-    total = float(weights.sum())
-    if total <= 0 or shown.max() <= 0:
-        return np.nan, np.nan, 0.0
-    half = max(1, round(0.004 / (grid[1] - grid[0])))
+def _summarise(
+    result: Arrivals, row: int, grid: FloatArray, others: FloatArray, likelihood: FloatArray, seen: FloatArray
+) -> None:
+    """Fill in one trace: the most likely cluster of onsets that the trace itself shows, and what the others expect."""
+    posterior = others * likelihood
+    shown = posterior * seen
+    if shown.max() <= 0:
+        return
+    half = max(1, round(_CLUSTER_S / (grid[1] - grid[0])))
     cluster = np.convolve(shown, np.ones(2 * half + 1), mode="same")
     middle = int(np.argmax(cluster))
     near = slice(max(0, middle - half), middle + half + 1)
-    weight = shown[near]
-    time = float(grid[near] @ weight / weight.sum())
-    spread = float(np.sqrt(((grid[near] - time) ** 2) @ weight / weight.sum()))
-    return time, spread, float(cluster[middle] / total)
+    result.time_s[row] = float(grid[near] @ shown[near] / shown[near].sum())
+    result.confidence[row] = min(1.0, float(cluster[middle] / posterior.sum()))
+    near = slice(max(0, middle - 2 * half), middle + 2 * half + 1)
+    weight = others[near] + 1e-12
+    mean = float(grid[near] @ weight / weight.sum())
+    result.expected_s[row] = mean
+    result.expected_sigma_s[row] = float(np.sqrt(((grid[near] - mean) ** 2) @ weight / weight.sum()))
+
+
+def _noise_stop(samples: FloatArray, record: ShotRecord, settings: PickSettings) -> FloatArray:
+    """Time before which each trace is noise, for want of better: before anything can arrive, or while it is quiet."""
+    earliest_s = record.offset_m / settings.moveout.fastest_m_s - settings.slack_s
+    quiet_s = record.start_s + quiet_start(samples, _QUIET_SHARE) * record.interval_s - _MARGIN_S
+    short = earliest_s - record.start_s < _ENOUGH_NOISE_S
+    return np.where(short, np.maximum(earliest_s, quiet_s), earliest_s)
 
 
 def condition_record(record: ShotRecord, settings: PickSettings) -> tuple[FloatArray, npt.NDArray[np.str_]]:
-    """Samples with offset and mains hum taken off, and the state of each trace."""
+    """Samples (traces, samples) with offset and mains hum taken off, and the state of each trace."""
     states = trace_states(record.samples, np.asarray(record.valid))
-    assert record.state is not None
-    states = np.where(record.state != "live", record.state, states)
-    stop = _noise_stop(record, 1, settings)
-    zero = np.zeros(stop.size, dtype=np.int64)
-    samples = remove_offset(record.samples.astype(np.float64), zero, stop)
-    samples, _ = remove_mains_hum(samples, record.interval_s, zero, stop)
-    return samples, states
+    states = np.where(np.asarray(record.state) == "live", states, np.asarray(record.state))
+    first = np.zeros(states.size, dtype=np.int64)
+    stop = _earliest(record, record.interval_s, record.samples.shape[1], settings)
+    samples = remove_offset(record.samples.astype(np.float64), first, stop)
+    return remove_mains_hum(samples, record.interval_s, first, stop)[0], states
+
+
+def _read_record(
+    samples: FloatArray, record: ShotRecord, arrivals: Arrivals, noise_stop_s: FloatArray, rows: IntArray, order: int
+) -> dict[int, CalibratedOnset]:
+    """Read the onsets of some traces at the fine interval; traces whose window does not fit are left out."""
+    blocks, factor = blocks_for_reading(samples, record.interval_s)
+    interval_s = factor * record.interval_s
+    stop = np.clip((noise_stop_s - record.start_s) / interval_s, 0, blocks.shape[1]).astype(np.int64)
+    noise = fit_noise(blocks, np.zeros(stop.size, dtype=np.int64), stop, order)
+    reader = prepare(noise, record.interval_s, factor)
+    recent = round(_ENOUGH_NOISE_S / interval_s)
+    floor_s = record.interval_s / np.sqrt(12.0)
+    onsets = {}
+    for row in rows.tolist():
+        start_s, about_s = float(record.start_s[row]), float(arrivals.time_s[row])
+        level = recent_level(blocks[row], noise, row, int((about_s - _MARGIN_S - start_s) / interval_s), recent)
+        found = read_onset(reader, blocks[row], level, start_s, about_s)
+        if found is not None:
+            onsets[row] = calibrate(found.median_s, found.width_s, found.log_likelihood, floor_s)
+    return onsets
+
+
+def _with_neighbours(
+    onset: CalibratedOnset, expected_s: float, expected_sigma_s: float
+) -> tuple[float, float, float, float]:
+    """Median, standard error, 5 % and 95 % point of a reading together with what the other traces expect."""
+    reach = 5 * max(onset.sigma_early_s, onset.sigma_late_s)
+    time_s = onset.time_s + np.linspace(-reach, reach, 801)
+    side = np.where(time_s < onset.time_s, onset.sigma_early_s, onset.sigma_late_s)
+    own = np.exp(-0.5 * ((time_s - onset.time_s) / side) ** 2) / side
+    others = np.exp(-0.5 * ((time_s - expected_s) / expected_sigma_s) ** 2) + _OFF_THE_PATH
+    weight = own * others
+    early, median, late = weighted_quantiles(time_s, weight, np.array([0.05, 0.5, 0.95]))
+    mean = float(time_s @ weight / weight.sum())
+    sigma = float(np.sqrt(((time_s - mean) ** 2) @ weight / weight.sum()))
+    return float(median), sigma, float(early), float(late)
 
 
 def pick_record(record: ShotRecord, settings: PickSettings | None = None) -> PickTable:
@@ -210,36 +302,51 @@ def pick_record(record: ShotRecord, settings: PickSettings | None = None) -> Pic
     Returns
     -------
     PickTable
-        One row per trace, in the record's order.
+        One row per trace, in the record's order. No pick depends on the order of the traces, on amplitude or on
+        polarity, and none is random.
     """
     settings = settings or PickSettings()
     samples, states = condition_record(record, settings)
     live = states != "dead"
-    coarse = find_arrivals(samples, record, live, settings)
     traces = record.samples.shape[0]
-    time_s = np.full(traces, np.nan)
-    sigma_s = np.full(traces, np.nan)
-    for row in np.flatnonzero(live & (coarse.confidence >= settings.show_confidence)):
-        time_s[row] = coarse.time_s[row]
-        sigma_s[row] = max(coarse.spread_s[row], record.interval_s)
-    found = np.isfinite(time_s)
-    state = np.where(found, np.where(coarse.confidence >= settings.keep_confidence, "kept", "dropped"), "none")
+    noise_stop_s = _noise_stop(samples, record, settings)
+    arrivals = find_arrivals(samples, record, live, noise_stop_s, settings)
+    if np.any(noise_stop_s[live] - record.start_s[live] < _ENOUGH_NOISE_S):
+        # once it is known where the arrivals are, all that is before them is noise
+        clear = arrivals.confidence >= settings.keep_confidence
+        noise_stop_s = np.where(clear, np.fmax(noise_stop_s, arrivals.time_s - _MARGIN_S), noise_stop_s)
+        arrivals = find_arrivals(samples, record, live, noise_stop_s, settings)
+    rows = np.flatnonzero(live & (arrivals.confidence >= settings.show_confidence))
+    onsets = _read_record(samples, record, arrivals, noise_stop_s, rows, settings.noise_order)
+    # arrivals found by strength are late; how late, the clear readings say
+    late = [arrivals.expected_s[row] - onset.time_s for row, onset in onsets.items() if onset.sigma_s < _CLEAR_S]
+    shift = float(np.median(late)) if len(late) >= 3 else _USUALLY_LATE_S
+    columns = {name: np.full(traces, np.nan) for name in ("time", "sigma", "early", "late", "reading", "bias")}
+    for row, onset in onsets.items():
+        sigma = float(np.hypot(arrivals.expected_sigma_s[row], _NEIGHBOUR_SIGMA_S))
+        median, spread, early, late_s = _with_neighbours(onset, float(arrivals.expected_s[row]) - shift, sigma)
+        values = (median, spread, early, late_s, onset.sigma_s, onset.bias_removed_s)
+        for name, value in zip(columns, values, strict=True):
+            columns[name][row] = value
+    found = np.isfinite(columns["time"])
+    confidence = np.where(found, arrivals.confidence, 0.0)
+    state = np.where(found, np.where(confidence >= settings.keep_confidence, "kept", "dropped"), "none")
     return PickTable(
         record=np.full(traces, record.record),
         channel=record.channel,
         source_xyz=np.tile(record.source_xyz, (traces, 1)),
         receiver_xyz=record.receiver_xyz,
         offset_m=record.offset_m,
-        time_s=time_s,
-        sigma_s=sigma_s,
-        early_s=time_s - 1.645 * sigma_s,
-        late_s=time_s + 1.645 * sigma_s,
-        reading_sigma_s=sigma_s,
-        bias_removed_s=np.where(found, 0.0, np.nan),
+        time_s=columns["time"],
+        sigma_s=columns["sigma"],
+        early_s=columns["early"],
+        late_s=columns["late"],
+        reading_sigma_s=columns["reading"],
+        bias_removed_s=columns["bias"],
         time_break_shift_s=np.zeros(traces),
         time_break_sigma_s=np.full(traces, settings.time_break_sigma_s),
         geophone_sigma_s=np.full(traces, settings.geophone_sigma_s),
-        confidence=coarse.confidence,
+        confidence=confidence,
         state=state,
         origin=np.full(traces, "auto"),
         note=np.where(states == "live", "", states),

@@ -15,6 +15,10 @@ from numba import njit
 
 FloatArray = npt.NDArray[np.float64]
 
+# Weight, at every geophone, of arrivals that do not come later with offset: a refractor that rises steeply does that
+# for a few geophones, crosstalk of the trigger and lightning do it along the whole spread.
+_NOT_DOWNWARD = 0.1
+
 
 @dataclass(frozen=True)
 class Moveout:
@@ -171,10 +175,17 @@ def _posterior_kernel(
     return posterior
 
 
+def smooth_times(values: FloatArray, interval_s: float, scale_s: float) -> FloatArray:
+    """Smooth along the last axis with a two-sided exponential of the given mean size; float (traces, times)."""
+    out = np.array(values, dtype=np.float64, order="C")
+    _smooth_kernel(out, float(np.exp(-interval_s / scale_s)))
+    return out
+
+
 def path_posterior(
     likelihood: FloatArray,
-    offset_m: FloatArray,
-    time_s: FloatArray,
+    offset_m: npt.NDArray[np.floating],
+    time_s: npt.NDArray[np.floating],
     moveout: Moveout,
     slack_s: float,
 ) -> FloatArray:
@@ -211,6 +222,7 @@ def path_posterior(
     bound = 1.33 * np.maximum(time_s, 0.0) + slack_s
     steep = slowness[np.newaxis, :, np.newaxis] * offset_m[:, np.newaxis, np.newaxis] <= bound
     allowed = (inside[:, np.newaxis, :] & steep).astype(np.float64)
+    allowed *= np.where(slowness > 0, 1.0, _NOT_DOWNWARD)[np.newaxis, :, np.newaxis]
     emission = np.ascontiguousarray(likelihood)
     return np.asarray(
         _posterior_kernel(emission, allowed, np.ascontiguousarray(shift), decay, moveout.faster, moveout.slower)

@@ -28,6 +28,7 @@ BoolArray = npt.NDArray[np.bool_]
 
 HIGHEST_CONFIDENCE = 0.995  # nobody's pick is certain to be on the right phase
 LEAST_SIGMA_S = 2e-5  # below this the errors of the forward model would count
+LEAST_PICKS = 4
 LEAST_HEAD = 3  # fewer head waves than this are taken for chance
 LEAST_DIRECT = 3  # fewer direct arrivals than this do not measure the overburden
 UNSEEN_UPPER_M_S = 600.0  # middle of the range of dry soils and weathered ground
@@ -84,20 +85,21 @@ def interpret(
     """
     # the matrices are small: more threads would only wait for each other, and add up in another order
     with threadpool_limits(limits=1, user_api="blas"):
-        return _interpret(_usable(picks), settings or InterpretSettings(), progress)
+        return _interpret(picks, settings or InterpretSettings(), progress)
 
 
 def _interpret(
-    used: PickTable, settings: InterpretSettings, progress: Callable[[int, int], None] | None
+    picks: PickTable, settings: InterpretSettings, progress: Callable[[int, int], None] | None
 ) -> DepthSection:
-    line = lay_out_line(used)
+    whole_line = lay_out_line(picks)
+    across = picks.kept & whole_line.broadside
+    rows = np.flatnonzero(picks.kept & ~across)
+    if rows.size < LEAST_PICKS:
+        raise ValueError(f"expected at least {LEAST_PICKS} kept picks along the line, found {rows.size}")
+    used, line = take(picks, rows), whole_line.of(rows)
     warnings = []
-    if np.any(line.broadside):
-        warnings.append(
-            f"{int(line.broadside.sum())} picks run across the line rather than along it and were not used."
-        )
-        used = take(used, ~line.broadside)
-        line = lay_out_line(used)
+    if np.any(across):
+        warnings.append(f"{int(across.sum())} picks run across the line rather than along it and were not used.")
     middle = Roughness(0.06, 0.02, 0.15, settings.correlation_spacings[-1] * _spacing(line))
     problem, seen = _best_start(used, line, middle)
     bare = solve(problem, middle, refractor=False)
@@ -147,13 +149,6 @@ def take(table: PickTable, rows: npt.NDArray[np.bool_] | IntArray) -> PickTable:
     return PickTable(**{field.name: getattr(table, field.name)[rows] for field in dataclasses.fields(table)})
 
 
-def _usable(picks: PickTable) -> PickTable:
-    used = take(picks, picks.kept)
-    if len(used) < 4:
-        raise ValueError(f"expected at least four kept picks, found {len(used)}")
-    return used
-
-
 def _spacing(line: Line) -> float:
     return float(np.median(np.diff(line.station_along_m)))
 
@@ -178,8 +173,8 @@ def _seen_probability(seen: Solution, bare: Solution) -> float:
 def _observations(used: PickTable, line: Line) -> Observations:
     records, record_of = np.unique(used.record, return_inverse=True)
     first = np.array([int(np.flatnonzero(record_of == number)[0]) for number in range(records.size)])
-    stations = line.station_along_m.size
-    static = np.array([used.geophone_sigma_s[line.station_of == number].max() for number in range(stations)])
+    static = np.zeros(line.station_along_m.size)
+    np.maximum.at(static, line.station_of, np.nan_to_num(used.geophone_sigma_s))
     sigma = np.maximum(np.fmax(used.sigma_s, used.reading_sigma_s), LEAST_SIGMA_S)
     # 5 % and 95 % points of a normal stand 1.645 standard deviations out
     early = np.where(np.isfinite(used.early_s), (used.time_s - used.early_s) / 1.645, sigma)
@@ -196,7 +191,7 @@ def _observations(used: PickTable, line: Line) -> Observations:
         record_of=np.asarray(record_of).reshape(-1).astype(np.int64),
         shift_s=np.nan_to_num(used.time_break_shift_s[first]),
         shift_sigma_s=np.nan_to_num(used.time_break_sigma_s[first]),
-        static_sigma_s=np.nan_to_num(static),
+        static_sigma_s=static,
     )
 
 

@@ -6,7 +6,7 @@ true length. Ground elevation between points is interpolated; beyond the last po
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -48,6 +48,16 @@ class Line:
     shot_of: IntArray
     stretch: FloatArray
     broadside: npt.NDArray[np.bool_]
+
+    def of(self, rows: IntArray) -> Line:
+        """The same line with these picks only; every place stays."""
+        return replace(
+            self,
+            station_of=self.station_of[rows],
+            shot_of=self.shot_of[rows],
+            stretch=self.stretch[rows],
+            broadside=self.broadside[rows],
+        )
 
     def ground_z_m(self, along_m: FloatArray) -> FloatArray:
         """Elevation of the ground at distances along the line, metres, from all shots and geophones."""

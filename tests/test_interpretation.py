@@ -132,8 +132,17 @@ def test_errors_stated_too_small_are_scaled_up_and_it_is_said(picks):
     assert any("scatter" in warning for warning in interpret(bold, QUICK).warnings)
 
 
+def test_a_geophone_without_a_pick_still_gets_its_depth(picks, section):
+    dead = picks.channel == 9
+    state = np.where(dead, "none", picks.state)
+    found = interpret(dataclasses.replace(picks, state=state), QUICK)
+    npt.assert_array_equal(found.along_m, section.along_m)
+    low, high = found.depth_interval_90_m[:, 0, 8]
+    assert low <= GROUND.depth_at(RECEIVERS[8]) <= high
+
+
 def test_too_few_picks_are_refused(picks):
-    with pytest.raises(ValueError, match="at least four kept picks, found 3"):
+    with pytest.raises(ValueError, match="at least 4 kept picks along the line, found 3"):
         interpret(take(picks, np.arange(3)), QUICK)
 
 

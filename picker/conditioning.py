@@ -154,6 +154,19 @@ def remove_mains_hum(
     return out, found
 
 
+def remove_drift(samples: FloatArray, interval_s: float, corner_hz: float) -> FloatArray:
+    """High-pass filter that looks back only: two poles at the corner, two zeros at zero frequency; the same shape.
+
+    An onset stays where it is and keeps its shape over a time much shorter than 1 / corner_hz. A trace is taken to
+    have been constant before its start.
+    """
+    from scipy.signal import lfilter
+
+    pole = float(np.exp(-2 * np.pi * corner_hz * interval_s))
+    centred = samples - samples[:, :1]
+    return np.asarray(lfilter([1.0, -2.0, 1.0], [1.0, -2.0 * pole, pole * pole], centred, axis=1))
+
+
 def fit_noise(samples: FloatArray, first: IntArray, stop: IntArray, order: int) -> Noise:
     """Describe the noise of a record from the samples before the arrivals.
 

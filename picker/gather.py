@@ -18,6 +18,7 @@ from picker.conditioning import (
     fit_noise,
     quiet_start,
     recent_level,
+    remove_drift,
     remove_mains_hum,
     remove_offset,
     trace_states,
@@ -48,6 +49,8 @@ class PickSettings:
         No first arrival is looked for after this time, seconds.
     noise_order : int
         Order of the filter that makes the noise white.
+    drift_hz : float
+        Below this frequency there is drift and no first arrival; it is filtered off, looking back only.
     coarse_s : float
         Sample interval at which arrivals are looked for, seconds; the record's own where that is longer.
     time_break_sigma_s : float
@@ -65,6 +68,7 @@ class PickSettings:
     slack_s: float = 0.005
     latest_s: float = 2.0
     noise_order: int = 12
+    drift_hz: float = 4.0
     coarse_s: float = 0.001
     time_break_sigma_s: float = 0.0005
     geophone_sigma_s: float = 0.0003
@@ -243,13 +247,14 @@ def _noise_stop(samples: FloatArray, record: ShotRecord, settings: PickSettings)
 
 
 def condition_record(record: ShotRecord, settings: PickSettings) -> tuple[FloatArray, npt.NDArray[np.str_]]:
-    """Samples (traces, samples) with offset and mains hum taken off, and the state of each trace."""
+    """Samples (traces, samples) with offset, mains hum and drift taken off, and the state of each trace."""
     states = trace_states(record.samples, np.asarray(record.valid))
     states = np.where(np.asarray(record.state) == "live", states, np.asarray(record.state))
     first = np.zeros(states.size, dtype=np.int64)
     stop = _earliest(record, record.interval_s, record.samples.shape[1], settings)
     samples = remove_offset(record.samples.astype(np.float64), first, stop)
-    return remove_mains_hum(samples, record.interval_s, first, stop)[0], states
+    samples, _ = remove_mains_hum(samples, record.interval_s, first, stop)
+    return remove_drift(samples, record.interval_s, settings.drift_hz), states
 
 
 def _read_record(

@@ -18,6 +18,7 @@ FloatArray = npt.NDArray[np.float64]
 PRE_TRIGGER_S = 0.1
 LENGTH_S = 0.2
 INTERVALS_S = (0.000125, 0.00025, 0.0005, 0.001)
+DRIFT_HZ = 4.0
 AIC_ASTRAY_S = 0.005
 NOISE_KINDS = ("white", "red", "drift", "wind")
 
@@ -111,18 +112,18 @@ def gather(
 
 def readings(rng: np.random.Generator, gathers: int, ratio: float | None = None) -> FloatArray:
     """Read the onsets of some gathers: rows of (median, width, log-likelihood, AIC onset, truth, ratio, interval)."""
-    from picker.conditioning import fit_noise, remove_offset
+    from picker.conditioning import fit_noise, remove_drift
     from picker.onsets import aic
     from picker.reading import READING, blocks_for_reading, prepare, read_onset
 
     rows = []
     for _ in range(gathers):
         drawn = gather(rng, ratio)
-        blocks, factor = blocks_for_reading(drawn.samples, drawn.interval_s)
+        samples = remove_drift(drawn.samples, drawn.interval_s, DRIFT_HZ)
+        blocks, factor = blocks_for_reading(samples, drawn.interval_s)
         interval = factor * drawn.interval_s
         first = np.zeros(drawn.onset_s.size, dtype=np.int64)
         stop = np.full(drawn.onset_s.size, int((PRE_TRIGGER_S - 0.002) / interval))
-        blocks = remove_offset(blocks, first, stop)
         noise_model = fit_noise(blocks, first, stop, 12)
         reader = prepare(noise_model, drawn.interval_s, factor)
         for row, truth in enumerate(drawn.onset_s.tolist()):
@@ -133,9 +134,7 @@ def readings(rng: np.random.Generator, gathers: int, ratio: float | None = None)
                 continue
             begin = int((about - READING.before_s + PRE_TRIGGER_S) / drawn.interval_s)
             end = int((about + READING.after_s + PRE_TRIGGER_S) / drawn.interval_s)
-            late = (
-                -PRE_TRIGGER_S + (begin + int(np.argmin(aic(drawn.samples[row, begin:end]))) + 0.5) * drawn.interval_s
-            )
+            late = -PRE_TRIGGER_S + (begin + int(np.argmin(aic(samples[row, begin:end]))) + 0.5) * drawn.interval_s
             rows.append((found.median_s, found.width_s, found.log_likelihood, late, truth, drawn.ratio[row], interval))
     return np.array(rows)
 

@@ -278,7 +278,7 @@ def solve(
     error_scale: float = 1.0,
     refractor: bool = True,
     unknowns: FloatArray | None = None,
-    iterations: int = 20,
+    iterations: int = 40,
 ) -> Solution:
     """Most probable delay times, velocities and shifts: Gauss-Newton on exact first arrivals.
 

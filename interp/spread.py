@@ -25,7 +25,7 @@ LEAST_PICK_WEIGHT = 1e-8  # as good as nothing, and yet a number to divide by
 MOST_TRIES = 20  # draws of an impossible ground are drawn again this often
 SLOWEST_M_S = 80.0  # loosest dry topsoil (common practice, no source)
 FASTEST_M_S = 7500.0  # faster than rock near the ground is
-WARM_STEPS = 12  # steps of a solution that starts from a near one
+WARM_STEPS = 30  # steps of a solution that starts from a near one
 LEAST_WEIGHT = 0.01  # a roughness less probable than this is not drawn
 
 

@@ -27,7 +27,7 @@ MIN_DEPTH_M = 0.05  # a refractor nearer than this cannot be told from the groun
 DIP_SIGMA = 0.18  # prior standard deviation of the overall slope of the refractor: tan 10 degrees
 BIAS_SIGMA = 0.3  # remaining error of a removed late bias, as a share of it
 FREE_STEPS = 8  # steps in which picks may change branch
-SETTLED = 0.05  # a step that moves no prediction by more than this share of its error is the last
+SETTLED = 0.02  # a step that moves predictions by less than this share of their errors (rms) is the last
 WILD_WINDOW_S = 0.05  # a pick on the wrong phase lies anywhere within this of the right one
 
 
@@ -298,7 +298,7 @@ def solve(
     Returns
     -------
     Solution
-        Converged when no prediction moved by more than SETTLED of its error in the last step.
+        Converged when predictions moved by less than SETTLED of their errors, rms, in the last step.
     """
     mean, factor = prior(problem, rough)
     state = mean if unknowns is None else unknowns
@@ -325,7 +325,7 @@ def solve(
         state = state + damping * move
         standard = normals if step == 0 else standard + damping * (normals - standard)
         at = linearise(problem, state)
-        if step > 3 and float(shift.max()) < SETTLED:
+        if step > 3 and float(np.sqrt(np.average(shift**2, weights=weight))) < SETTLED:
             converged = True
             break
     head = (at.head_s < at.direct_s) & refractor

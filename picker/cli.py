@@ -1,121 +1,51 @@
-"""The commands that turn records into picks, and the group that gives every command its exit status.
-
-A command parses, calls one function and prints. Results go to standard output, progress and messages to standard error.
-"""
+"""The commands that turn records into picks: each parses, calls one step and ends with its status."""
 
 from __future__ import annotations
 
-import sqlite3
-import sys
-from collections.abc import Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import click
 
 from picker.errors import InputError
+from picker.stages import echo_compiling, load_stage, pick_stage
+from picker.terminal import EXIT_FINDINGS, CommandGroup, echo_findings, needs_a_look, survey_argument, units_option
 
 if TYPE_CHECKING:
-    from picker.findings import Finding
-    from picker.loading import Loaded
     from picker.log import LogEntry
-    from picker.picks import PickTable
-
-EXIT_FINDINGS = 1
-EXIT_INPUT = 2
-EXIT_STOPPED = 130
-_ROWS_SHOWN = 60
-_PLACES_SHOWN = 4
-
 
 _POSITIVE = click.FloatRange(min=0, min_open=True)
 _NOT_NEGATIVE = click.FloatRange(min=0)
 
 
-class CommandGroup(click.Group):
-    """A group of commands whose exit status is 0 done, 1 findings to look at, 2 unusable input, 130 stopped."""
-
-    def invoke(self, ctx: click.Context) -> Any:
-        """Run a command; what could not be used becomes one message and status 2."""
-        try:
-            return super().invoke(ctx)
-        except InputError as error:
-            raise _Unusable(str(error)) from error
-        except click.UsageError:
-            raise
-        except click.ClickException as error:
-            raise _Unusable(error.format_message()) from error
-        except BrokenPipeError:
-            raise
-        except sqlite3.Error as error:
-            raise _Unusable(f"the survey file is damaged ({error}). Put a copy in its place.") from error
-        except OSError as error:
-            place = f"{error.filename}: " if error.filename else ""
-            raise _Unusable(f"{place}{error.strerror or error}.") from error
-        except (KeyboardInterrupt, click.Abort):
-            click.echo("Stopped. What was reported as done is kept.", err=True)
-            ctx.exit(EXIT_STOPPED)
-
-
-class _Unusable(click.ClickException):
-    """What click prints as `Error: ...` and ends with status 2."""
-
-    exit_code = EXIT_INPUT
-
-
-def survey_argument(command: Any) -> Any:
-    """Give a command its first argument, the survey file."""
-    return click.argument("survey", type=click.Path(path_type=Path))(command)
-
-
-def _table(header: tuple[str, ...], rows: Sequence[tuple[str, ...]]) -> list[str]:
-    """Lines of a table, columns aligned to the right."""
-    widths = [max(len(row[column]) for row in [header, *rows]) for column in range(len(header))]
-    return ["  ".join(cell.rjust(width) for cell, width in zip(row, widths, strict=True)) for row in [header, *rows]]
-
-
-def echo_findings(findings: list[Finding]) -> None:
-    """Print findings to standard output, those that say the same of several places once."""
-    places: dict[tuple[str, str, str], list[str]] = {}
-    for finding in sorted(findings, key=lambda one: one.severity != "look"):
-        where = ", ".join(
-            [Path(finding.file).name] * bool(finding.file)
-            + [f"record {finding.record}"] * (finding.record is not None)
-            + [f"channel {finding.channel}"] * (finding.channel is not None)
-        )
-        places.setdefault((finding.severity, finding.text, finding.proposal), []).append(where)
-    for (severity, text, proposal), where_all in places.items():
-        where = "; ".join(where_all[:_PLACES_SHOWN])
-        if len(where_all) > _PLACES_SHOWN:
-            where += f" and {len(where_all) - _PLACES_SHOWN} more"
-        place = f" {where}:" if where else ""
-        click.echo(f"{'LOOK' if severity == 'look' else 'Note'}{place} {text} {proposal}".rstrip())
-
-
-def _needs_a_look(findings: list[Finding]) -> bool:
-    """Whether a person must look at any of the findings."""
-    return any(finding.severity == "look" for finding in findings)
+def load_options(command: Any) -> Any:
+    """Give a command the options of loading files."""
+    options = (
+        click.option(
+            "--sigma-ms", type=_POSITIVE, help="Standard error of picks that come without one, in milliseconds."
+        ),
+        click.option(
+            "--interval-us",
+            type=_POSITIVE,
+            help="Sample interval of the records in microseconds, whatever their headers say.",
+        ),
+        click.option(
+            "--geometry",
+            type=click.Path(path_type=Path),
+            help="Table (.csv) of positions that replace those in the headers: record, channel, source_x_m, "
+            "receiver_x_m, ...",
+        ),
+    )
+    for option in reversed(options):
+        command = option(command)
+    return command
 
 
 @click.command()
 @survey_argument
 @click.argument("files", nargs=-1, required=True, type=click.Path(path_type=Path), metavar="FILE...")
-@click.option(
-    "--sigma-ms",
-    type=_POSITIVE,
-    help="Standard error of picks that come without one, in milliseconds.",
-)
-@click.option(
-    "--interval-us",
-    type=_POSITIVE,
-    help="Sample interval of the records in microseconds, whatever their headers say.",
-)
-@click.option(
-    "--geometry",
-    type=click.Path(path_type=Path),
-    help="Table (.csv) of positions that replace those in the headers: record, channel, source_x_m, receiver_x_m, ...",
-)
-@click.option("--units", type=click.Choice(["m", "ft"]), default="m", show_default=True, help="Lengths as printed.")
+@load_options
+@units_option
 def load(
     survey: Path,
     files: tuple[Path, ...],
@@ -135,73 +65,9 @@ def load(
       rockhead load mill_lane.survey records/*.sgy --geometry positions.csv
       rockhead load mill_lane.survey picks.csv --sigma-ms 1
     """  # noqa: D301 - click wants the character
-    from picker.loading import load_files
-
-    loaded = load_files(
-        survey,
-        files,
-        sigma_s=None if sigma_ms is None else sigma_ms * 1e-3,
-        interval_s=None if interval_us is None else interval_us * 1e-6,
-        geometry_path=geometry,
-    )
-    _echo_loaded(loaded, survey, units)
-    if _needs_a_look(list(loaded.findings)):
+    loaded = load_stage(survey, files, sigma_ms, interval_us, geometry, units)
+    if needs_a_look(loaded.findings):
         raise click.exceptions.Exit(EXIT_FINDINGS)
-
-
-def _echo_loaded(loaded: Loaded, survey: Path, units: str) -> None:
-    """Print what was loaded: a line a record, what was found, and one that sums up."""
-    import numpy as np
-
-    from picker.units import columns_in
-
-    rows = []
-    for header in loaded.records[:_ROWS_SHOWN]:
-        lengths = columns_in(
-            units,
-            {
-                "shot_x_m": [header.source_xyz[0]],
-                "first_x_m": [header.receiver_xyz[:, 0].min()],
-                "last_x_m": [header.receiver_xyz[:, 0].max()],
-            },
-        )
-        shot_x, first_x, last_x = (f"{float(values[0]):.1f}" for values in lengths.values())
-        number = str(header.record)
-        if header.record != header.original_record:
-            number += f" (was {header.original_record})"
-        rows.append(
-            (
-                number,
-                shot_x,
-                f"{header.channel.size}",
-                f"{first_x} to {last_x}",
-                f"{header.interval_s * 1e3:g}",
-                f"{int(header.valid.max())}",
-                f"{float(np.median(header.start_s)) * 1e3:g}",
-                f"{int((header.state == 'dead').sum()) or ''}",
-            )
-        )
-    if rows:
-        titles = ("record", f"shot x ({units})", "traces", f"geophones x ({units})", "interval (ms)", "samples")
-        for line in _table((*titles, "start (ms)", "dead"), rows):
-            click.echo(line.rstrip())
-        if len(loaded.records) > len(rows):
-            click.echo(f"... and {_count(len(loaded.records) - len(rows), 'record')} more")
-    for path in loaded.known_files:
-        click.echo(f"{path.name}: in the survey already, nothing changed")
-    echo_findings(list(loaded.findings))
-    done = [
-        _count(number, what) for number, what in ((len(loaded.new), "record"), (loaded.picks_changed, "pick")) if number
-    ]
-    if done:
-        click.echo(f"{'Created' if loaded.created else 'Updated'} {survey}: {' and '.join(done)} loaded.")
-    else:
-        click.echo(f"Nothing new: {survey} is as it was.")
-
-
-def _count(number: int, what: str) -> str:
-    """Number of things in words."""
-    return f"{number} {what}" if number == 1 else f"{number} {what}s"
 
 
 @click.command()
@@ -240,10 +106,10 @@ def pick(
             )
         opened.check_files()
         replaced = sorted(opened.imported_records() & {header.record for header in headers})
-        click.echo("Getting ready (the first run compiles the picking, once).", err=True)
+        echo_compiling()
         from dataclasses import replace
 
-        from picker.gather import PickSettings, pick_records
+        from picker.gather import PickSettings
 
         settings = PickSettings()
         moveout = _given(slowest_m_s=slowest_m_s, fastest_m_s=fastest_m_s)
@@ -259,59 +125,18 @@ def pick(
             raise click.UsageError(f"The settings do not go together: {error}.") from error
         if settings.moveout.slowest_m_s >= settings.moveout.fastest_m_s:
             raise click.UsageError("--slowest-m-s must be less than --fastest-m-s.")
-        with click.progressbar(length=len(headers), label="Picking", file=sys.stderr) as bar:
-            shots = (opened.read(header.record) for header in headers)
-            table = pick_records(shots, settings, progress=lambda _done: bar.update(1))
-        opened.store_picks(table, reason=repr(settings))
-        findings = _echo_picked(opened.picks(), {header.record for header in headers})
+        findings = pick_stage(opened, [header.record for header in headers], settings)
     if replaced:
         numbers = ", ".join(map(str, replaced))
         click.echo(f"Imported picks of records {numbers} are replaced; they stay in the log.", err=True)
     echo_findings(findings)
-    if _needs_a_look(findings):
+    if needs_a_look(findings):
         raise click.exceptions.Exit(EXIT_FINDINGS)
 
 
 def _given(**options: float | None) -> dict[str, Any]:
     """Options that were given."""
     return {name: value for name, value in options.items() if value is not None}
-
-
-def _echo_picked(picks: PickTable, records: set[int]) -> list[Finding]:
-    """Print a line a record on the picks as they hold now; findings are records without any."""
-    import numpy as np
-
-    from picker.findings import Finding
-
-    rows = []
-    findings = []
-    for record in sorted(records):
-        mine = picks.record == record
-        kept = mine & picks.kept
-        sigma_ms = f"{float(np.median(picks.sigma_s[kept])) * 1e3:.2f}" if kept.any() else ""
-        manual = int((mine & (picks.origin == "manual")).sum())
-        rows.append(
-            (
-                f"{record}",
-                f"{int(kept.sum())}",
-                f"{int((mine & (picks.state == 'none')).sum())}",
-                f"{int((mine & (picks.state == 'dropped')).sum())}",
-                f"{manual or ''}",
-                sigma_ms,
-            )
-        )
-        if not kept.any():
-            findings.append(Finding("look", "No first arrival could be picked.", "Look at the gather.", record=record))
-    for line in _table(("record", "kept", "none", "dropped", "by hand", "median sigma (ms)"), rows[:_ROWS_SHOWN]):
-        click.echo(line.rstrip())
-    if len(rows) > _ROWS_SHOWN:
-        click.echo(f"... and {_count(len(rows) - _ROWS_SHOWN, 'record')} more")
-    kept = picks.kept & np.isin(picks.record, sorted(records))
-    total = f"{int(kept.sum())} picks kept of {int(np.isin(picks.record, sorted(records)).sum())} traces"
-    if kept.any():
-        total += f", median sigma {float(np.median(picks.sigma_s[kept])) * 1e3:.2f} ms"
-    click.echo(f"{total}.")
-    return findings
 
 
 @click.command()

@@ -174,6 +174,11 @@ class Survey:
                 survey_files.check_unchanged(self._connection, header)
                 checked.add(header.file)
 
+    def files(self) -> list[tuple[str, str]]:
+        """Name and SHA-256 checksum of every file of records, by name."""
+        rows = self._connection.execute("SELECT path, sha256 FROM file")
+        return sorted((Path(row["path"]).name, row["sha256"]) for row in rows)
+
     def findings(self, sha256: Collection[str] | None = None) -> list[Finding]:
         """List what was found in the files of records; in those with the checksums given, where they are given."""
         rows = self._connection.execute(

@@ -101,14 +101,14 @@ def report(survey: Path, directory: Path, units: str, title: str | None) -> None
     Example:
       rockhead report mill_lane.survey report
     """  # noqa: D301 - click wants the character
-    from interp.process import changed_since_interpreted, report_stage
+    from interp.process import out_of_date, report_stage
     from picker.survey import Survey
 
     with Survey.open(survey) as opened:
         report_stage(opened, directory, units, title or survey.stem)
-        changed = changed_since_interpreted(opened)
-    echo_findings(changed)
-    if needs_a_look(changed):
+        findings = out_of_date(opened)
+    echo_findings(findings)
+    if needs_a_look(findings):
         raise click.exceptions.Exit(EXIT_FINDINGS)
 
 
@@ -119,22 +119,22 @@ def report(survey: Path, directory: Path, units: str, title: str | None) -> None
 def export(survey: Path, directory: Path, units: str) -> None:
     """Write picks.csv, depths.csv, bounds.csv, velocities.csv and section.json into DIR.
 
-    Depths are those of the last interpretation. With --units ft the tables are in feet and their columns say so;
-    section.json is in metres always.
+    Depths are those of the last interpretation; before the first one only picks.csv is written. With --units ft the
+    tables are in feet and their columns say so; section.json is in metres always.
 
     \b
     Example:
       rockhead export mill_lane.survey tables
       rockhead export mill_lane.survey tables_ft --units ft
     """  # noqa: D301 - click wants the character
-    from interp.process import changed_since_interpreted, export_stage
+    from interp.process import export_stage, out_of_date
     from picker.survey import Survey
 
     with Survey.open(survey) as opened:
         export_stage(opened, directory, units)
-        changed = changed_since_interpreted(opened)
-    echo_findings(changed)
-    if needs_a_look(changed):
+        findings = out_of_date(opened)
+    echo_findings(findings)
+    if needs_a_look(findings):
         raise click.exceptions.Exit(EXIT_FINDINGS)
 
 

@@ -55,7 +55,7 @@ def interpret_stage(survey: Survey, settings: InterpretSettings, units: str) -> 
         If the picks cannot carry an interpretation.
     """
     from interp.interpretation import interpret
-    from interp.section_json import section_to_json
+    from interp.section_json import section_from_json, section_to_json
 
     picks = survey.picks()
     if not picks.kept.any():
@@ -71,10 +71,11 @@ def interpret_stage(survey: Survey, settings: InterpretSettings, units: str) -> 
             raise InputError(
                 f"the picks cannot be interpreted: {error}",
                 file=survey.path,
-                remedy=f"Look at them: rockhead export {survey.path} DIR writes picks.csv",
+                remedy=f"Look at them with: rockhead export {survey.path} DIR, which writes picks.csv",
             ) from error
-    _echo_section(section, units)
     text = section_to_json(section)
+    section = section_from_json(text)  # as it is kept, so that every table of it says the same
+    _echo_section(section, units)
     latest = survey.latest_interpretation()
     if latest is not None and latest[2] == text:
         click.echo(f"The same as interpretation {latest[0]} in {survey.path}: nothing changed.")
@@ -137,15 +138,17 @@ def survey_findings(survey: Survey) -> list[Finding]:
     return findings
 
 
-def changed_since_interpreted(survey: Survey) -> list[Finding]:
-    """Give a finding where picks were changed after the last interpretation, which the results do not show."""
+def out_of_date(survey: Survey) -> list[Finding]:
+    """Give a finding where there is no interpretation yet, or picks were changed after the last one."""
     from picker.findings import Finding
 
     kinds = [entry.kind for entry in survey.log()]
-    after = kinds[len(kinds) - kinds[::-1].index("interpret") :] if "interpret" in kinds else []
-    if not any(kind in _CHANGES_OF_PICKS for kind in after):
+    if "interpret" not in kinds:
+        text = "The survey has not been interpreted yet: there are no depths and velocities."
+    elif any(kind in _CHANGES_OF_PICKS for kind in kinds[len(kinds) - kinds[::-1].index("interpret") :]):
+        text = "Picks have been changed since the last interpretation; depths and velocities do not show it yet."
+    else:
         return []
-    text = "Picks have been changed since the last interpretation; depths and velocities do not show it yet."
     return [Finding("look", text, f"Run: rockhead interpret {survey.path}")]
 
 
@@ -155,7 +158,7 @@ def export_stage(survey: Survey, directory: Path, units: str) -> None:
     Parameters
     ----------
     survey : Survey
-        Open, with an interpretation.
+        Open. Without an interpretation only its picks are written.
     directory : Path
         Made where it is not there. Files of these names are replaced where this program wrote them.
     units : str
@@ -164,21 +167,22 @@ def export_stage(survey: Survey, directory: Path, units: str) -> None:
     Raises
     ------
     InputError
-        If there is no interpretation, or a file is in the way.
+        If a file is in the way.
     """
     from interp.section_json import section_to_json
     from interp.section_tables import bound_columns, depth_columns, to_csv, velocity_columns
     from picker.picks_csv import picks_to_csv
     from picker.units import columns_in
 
-    section = latest_section(survey)
-    texts = {
-        "picks.csv": picks_to_csv(survey.picks(), units),
-        "depths.csv": to_csv(columns_in(units, depth_columns(section))),
-        "bounds.csv": to_csv(columns_in(units, bound_columns(section))),
-        "velocities.csv": to_csv(columns_in(units, velocity_columns(section))),
-        "section.json": section_to_json(section),
-    }
+    texts = {"picks.csv": picks_to_csv(survey.picks(), units)}
+    if survey.latest_interpretation() is not None:
+        section = latest_section(survey)
+        texts |= {
+            "depths.csv": to_csv(columns_in(units, depth_columns(section))),
+            "bounds.csv": to_csv(columns_in(units, bound_columns(section))),
+            "velocities.csv": to_csv(columns_in(units, velocity_columns(section))),
+            "section.json": section_to_json(section),
+        }
     make_folder(directory)
     for name, text in texts.items():
         _refuse_foreign(directory / name, text)
@@ -261,7 +265,7 @@ def report_stage(survey: Survey, directory: Path, units: str, title: str) -> Non
         records=records if numbers else None,
         log=survey.log(),
         files=survey.files(),
-        findings=survey_findings(survey) + changed_since_interpreted(survey),
+        findings=survey_findings(survey) + out_of_date(survey),
         created=datetime.date.today().isoformat(),
     )
     make_folder(directory)

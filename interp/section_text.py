@@ -9,6 +9,7 @@ import numpy as np
 from interp.plane_pairs import PlanePair, plane_pairs
 from interp.section import DepthSection
 from interp.section_tables import Columns, cells, depth_columns, velocity_columns
+from interp.velocity_zones import BELIEVED_WEIGHT
 from picker.units import columns_in
 
 _MARKS = "abcdefghijklmnopqrstuvwxyz"
@@ -83,8 +84,9 @@ def _with_notes(columns: dict[str, list[str]], notes: list[str]) -> TextTable:
 
 def quality_line(section: DepthSection) -> str:
     """One line on how well the result fits and what it is conditioned on."""
+    believed = int(np.sum(section.fit.weight > BELIEVED_WEIGHT))
     parts = [
-        f"{section.fit.time_s.size} picks, rms misfit {section.rms_misfit_s * 1e3:.2f} ms",
+        f"{section.fit.time_s.size} picks, {believed} of them believed, rms misfit {section.rms_misfit_s * 1e3:.2f} ms",
         f"mean squared misfit over stated error {section.chi2_per_pick:.2f}",
     ]
     numbers = sorted(section.refractor_probability.items())

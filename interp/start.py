@@ -37,7 +37,7 @@ def flat_start(offset_m: FloatArray, time_s: FloatArray, sigma_s: FloatArray) ->
     Raises
     ------
     ValueError
-        If fewer than three picks, or all at one offset.
+        If fewer than three picks, or all at one offset, or nearly all at or before their time breaks.
     """
     if offset_m.size < 3 or np.ptp(offset_m) <= 0:
         raise ValueError(f"expected at least three picks at different offsets, found {offset_m.size}")
@@ -47,6 +47,8 @@ def flat_start(offset_m: FloatArray, time_s: FloatArray, sigma_s: FloatArray) ->
     scale = np.hypot(sigma_s[order], FLOOR_S)
     apparent = offset / np.maximum(time, 1e-4)
     usable = apparent[(offset > 0) & (time > 1e-4)]
+    if usable.size < 3:
+        raise ValueError(f"expected at least three picks later than their time breaks, found {usable.size}")
     slow, fast = np.quantile(usable, (0.02, 0.98))
     upper = np.geomspace(max(0.5 * slow, 80.0), min(1.3 * fast, 6000.0), 40)
     ratio = np.geomspace(LEAST_RATIO, MOST_RATIO, 36)

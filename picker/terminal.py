@@ -5,6 +5,7 @@ Results go to standard output, progress and messages to standard error.
 
 from __future__ import annotations
 
+import os
 import sqlite3
 from collections.abc import Sequence
 from pathlib import Path
@@ -23,6 +24,7 @@ EXIT_STOPPED = 130
 ROWS_SHOWN = 60
 ROWS_SHOWN = 60
 _PLACES_SHOWN = 4
+_SHOW_TRACEBACK = "ROCKHEAD_TRACEBACK"
 
 
 class CommandGroup(click.Group):
@@ -48,6 +50,15 @@ class CommandGroup(click.Group):
         except (KeyboardInterrupt, click.Abort):
             click.echo("Stopped. What was reported as done is kept.", err=True)
             ctx.exit(EXIT_STOPPED)
+        except click.exceptions.Exit:
+            raise
+        except Exception as error:
+            if os.environ.get(_SHOW_TRACEBACK):
+                raise
+            raise _Unusable(
+                f"a fault in rockhead itself ({type(error).__name__}: {error}). What was reported as done is kept. "
+                f"Run the command again with {_SHOW_TRACEBACK}=1 in the environment to see where, and report it."
+            ) from error
 
 
 class _Unusable(click.ClickException):
@@ -64,7 +75,9 @@ def survey_argument(command: Any) -> Any:
 def units_option(command: Any) -> Any:
     """Give a command its option for feet."""
     choice = click.Choice(["m", "ft"])
-    return click.option("--units", type=choice, default="m", show_default=True, help="Lengths as told.")(command)
+    return click.option("--units", type=choice, default="m", show_default=True, help="Lengths in metres or feet.")(
+        command
+    )
 
 
 def table_lines(header: tuple[str, ...], rows: Sequence[tuple[str, ...]]) -> list[str]:

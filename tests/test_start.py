@@ -22,3 +22,9 @@ def test_start_finds_the_ground_to_a_step_of_its_grid_with_and_without_wild_pick
 def test_too_few_picks_are_refused():
     with pytest.raises(ValueError, match="at least three"):
         flat_start(np.array([1.0, 2.0]), np.array([0.1, 0.2]), np.array([1e-3, 1e-3]))
+
+
+def test_times_before_their_time_breaks_are_refused():
+    offset = np.arange(1.0, 10.0)
+    with pytest.raises(ValueError, match="later than their time breaks, found 0"):
+        flat_start(offset, offset / 500.0 - 1.0, np.full(9, 1e-3))

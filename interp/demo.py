@@ -87,6 +87,8 @@ def compared_with_truth(recorded: RecordedSurvey, section: DepthSection, units: 
     true_m = np.interp(section.along_m, survey.receiver_x_m - survey.receiver_x_m[0], survey.depth_m[0])
     low, high = section.depth_interval_90_m[:, 0]
     told = np.isfinite(low)
+    if not told.any():
+        return "The truth: there is a refractor, and the result does not tell of it."
     held = int(np.sum((true_m >= low) & (true_m <= high) & told))
     error_m = np.abs(section.depth_m[0] - true_m)[told]
     size = columns_in(units, {"middle_m": np.median(error_m), "most_m": error_m.max()})

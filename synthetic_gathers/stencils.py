@@ -1,9 +1,9 @@
 """Compiled time stepping of the velocity-stress equations on a staggered grid.
 
-Second order in time, fourth in space, second in the cells next to the ground surface where wider stencils
-would reach into air. Absorbing edges are convolutional perfectly matched layers: an extra term for each derivative. The kernel runs
-on one core and lets go of the interpreter lock: shots side by side in threads use the other cores, which costs nothing
-in waiting and leaves every result the same to the last bit.
+Second order in time, fourth in space, second in the cells next to the ground surface where wider stencils would reach
+into air. Absorbing edges are convolutional perfectly matched layers: an extra term for each derivative. The kernel
+runs on one core and lets go of the interpreter lock: shots side by side in threads use the other cores, which costs
+nothing in waiting and leaves every result the same to the last bit.
 """
 
 from __future__ import annotations

@@ -6,7 +6,7 @@ at offset x on the surface, with p = t / x and
 R(p) = (1/b^2 - 2 p^2)^2 + 4 p^2 qa qb, qa = sqrt(1/a^2 - p^2), qb = sqrt(1/b^2 - p^2),
 the displacement along an impulsive normal load is Im[qa / (b^2 R)] / (pi mu x), along a tangential one the same with
 qb for qa; real axis approached from above, principal value at the Rayleigh pole. At late times it tends to
-(1 - nu) / (pi mu t), the growth that Flamant's static solution -(1 - nu) ln(x) / (pi mu) asks for, which fixes the sign.
+(1 - nu) / (pi mu t), the growth that Flamant's static solution -(1 - nu) ln(x) / (pi mu) asks for: that fixes the sign.
 """
 
 from __future__ import annotations

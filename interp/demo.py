@@ -100,7 +100,7 @@ def compared_with_truth(recorded: RecordedSurvey, section: DepthSection, units: 
         (shown,) = columns_in(units, {"velocity_m_s": np.array([true_m_s, *ends_m_s])}).values()
         velocities.append("{:.0f} {units}/s (told {:.0f} to {:.0f})".format(*shown.tolist(), units=units))
     return (
-        f"The truth: {held} of {int(told.sum())} depth intervals hold the true depth (9 in 10 should, over many such "
-        f"lines); the middle one of the errors in depth is {middle:.2f} {units}, the worst {most:.2f} {units}; the true "
+        f"The truth: {held} of {int(told.sum())} depth intervals hold the true depth (9 in 10 should, over many "
+        f"such lines); the middle error in depth is {middle:.2f} {units}, the worst {most:.2f} {units}; the true "
         f"velocities are {' and '.join(velocities)}."
     )

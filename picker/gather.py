@@ -12,6 +12,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 import numpy.typing as npt
+from scipy.special import expit
 
 from picker.conditioning import (
     block_means,
@@ -28,7 +29,13 @@ from picker.late_bias import CalibratedOnset, calibrate
 from picker.moveout import Moveout, path_posterior, smooth_times
 from picker.onsets import change_scores
 from picker.picks import PickTable
-from picker.reading import blocks_for_reading, prepare, read_onset, weighted_quantiles
+from picker.reading import (
+    blocks_for_reading,
+    neighbours_growth,
+    prepare,
+    read_onset,
+    score_onset,
+)
 from picker.records import ShotRecord
 
 FloatArray = npt.NDArray[np.float64]
@@ -94,12 +101,9 @@ _ENOUGH_NOISE_S = 0.03
 _MARGIN_S = 0.004
 # A trace without pre-trigger samples is taken for noise until it reaches this share of its peak.
 _QUIET_SHARE = 0.01
-# How well the neighbours know an onset at best, how often not at all, and how late it is where strength finds it.
-_NEIGHBOUR_SIGMA_S = 0.001
-_OFF_THE_PATH = 0.02
-_USUALLY_LATE_S = 0.001
-# Readings better than this are clear.
-_CLEAR_S = 0.001
+# Gusts pass for onsets: the evidence of one trace for its onset counts by this much when its confidence is told.
+_GUST_DAMPING = 0.25
+_NORMAL_95 = 1.6448536269514722
 
 
 def _sides(record: ShotRecord) -> IntArray:
@@ -112,15 +116,10 @@ def _sides(record: ShotRecord) -> IntArray:
 
 @dataclass(frozen=True, eq=False)
 class Arrivals:
-    """Where the first arrivals of a record are, at the coarse sample interval; arrays (traces,).
-
-    `time_s` and `confidence` use all traces, `expected_s` and `expected_sigma_s` all traces but the trace itself.
-    """
+    """Where the first arrivals of a record are, to the coarse sample interval, and how sure that is; shape (traces,)."""
 
     time_s: FloatArray
     confidence: FloatArray
-    expected_s: FloatArray
-    expected_sigma_s: FloatArray
 
 
 def _earliest(record: ShotRecord, interval_s: float, count: int, settings: PickSettings) -> IntArray:
@@ -171,10 +170,9 @@ def find_arrivals(
     )
     origin = float(record.start_s.min())
     skip = max(0, int(np.floor((-settings.slack_s - origin) / interval_s)))
-    grid = origin + interval_s * np.arange(skip, max(skip + 2, int(np.ceil((last - origin) / interval_s))))
+    grid: FloatArray = origin + interval_s * np.arange(skip, max(skip + 2, int(np.ceil((last - origin) / interval_s))))
     likelihood, seen = _likelihoods(scores, earliest, record, grid, interval_s, factor)
-    result = Arrivals(*(np.full(traces, np.nan) for _ in range(4)))
-    result.confidence[:] = 0.0
+    result = Arrivals(np.full(traces, np.nan), np.zeros(traces))
     side = _sides(record)
     for way in (-1, 1):
         rows = np.flatnonzero(live & (side == way))
@@ -220,7 +218,7 @@ def _likelihoods(
 def _summarise(
     result: Arrivals, row: int, grid: FloatArray, others: FloatArray, likelihood: FloatArray, seen: FloatArray
 ) -> None:
-    """Fill in one trace: the most likely cluster of onsets that the trace itself shows, and what the others expect."""
+    """Fill in one trace: the most likely cluster of onsets that the trace itself shows, given the others."""
     posterior = others * likelihood
     shown = posterior * seen
     if shown.max() <= 0:
@@ -231,11 +229,6 @@ def _summarise(
     near = slice(max(0, middle - half), middle + half + 1)
     result.time_s[row] = float(grid[near] @ shown[near] / shown[near].sum())
     result.confidence[row] = min(1.0, float(cluster[middle] / posterior.sum()))
-    near = slice(max(0, middle - 2 * half), middle + 2 * half + 1)
-    weight = others[near] + 1e-12
-    mean = float(grid[near] @ weight / weight.sum())
-    result.expected_s[row] = mean
-    result.expected_sigma_s[row] = float(np.sqrt(((grid[near] - mean) ** 2) @ weight / weight.sum()))
 
 
 def _noise_stop(samples: FloatArray, record: ShotRecord, settings: PickSettings) -> FloatArray:
@@ -268,30 +261,21 @@ def _read_record(
     reader = prepare(noise, record.interval_s, factor)
     recent = round(_ENOUGH_NOISE_S / interval_s)
     floor_s = record.interval_s / np.sqrt(12.0)
-    onsets = {}
+    scores = {}
     for row in rows.tolist():
         start_s, about_s = float(record.start_s[row]), float(arrivals.time_s[row])
         level = recent_level(blocks[row], noise, row, int((about_s - _MARGIN_S - start_s) / interval_s), recent)
-        found = read_onset(reader, blocks[row], level, start_s, about_s)
+        found = score_onset(reader, blocks[row], level, start_s, about_s)
         if found is not None:
-            onsets[row] = calibrate(found.median_s, found.width_s, found.log_likelihood, floor_s)
+            scores[row] = found
+    if not scores:
+        return {}
+    growth = neighbours_growth(list(scores.values()), record.offset_m[list(scores)])
+    onsets = {}
+    for (row, found), log_growth in zip(scores.items(), growth, strict=True):
+        reading = read_onset(found, log_growth)
+        onsets[row] = calibrate(reading, floor_s)
     return onsets
-
-
-def _with_neighbours(
-    onset: CalibratedOnset, expected_s: float, expected_sigma_s: float
-) -> tuple[float, float, float, float]:
-    """Median, standard error, 5 % and 95 % point of a reading together with what the other traces expect."""
-    reach = 5 * max(onset.sigma_early_s, onset.sigma_late_s)
-    time_s = onset.time_s + np.linspace(-reach, reach, 801)
-    side = np.where(time_s < onset.time_s, onset.sigma_early_s, onset.sigma_late_s)
-    own = np.exp(-0.5 * ((time_s - onset.time_s) / side) ** 2) / side
-    others = np.exp(-0.5 * ((time_s - expected_s) / expected_sigma_s) ** 2) + _OFF_THE_PATH
-    weight = own * others
-    early, median, late = weighted_quantiles(time_s, weight, np.array([0.05, 0.5, 0.95]))
-    mean = float(time_s @ weight / weight.sum())
-    sigma = float(np.sqrt(((time_s - mean) ** 2) @ weight / weight.sum()))
-    return float(median), sigma, float(early), float(late)
 
 
 def pick_record(record: ShotRecord, settings: PickSettings | None = None) -> PickTable:
@@ -323,18 +307,17 @@ def pick_record(record: ShotRecord, settings: PickSettings | None = None) -> Pic
         arrivals = find_arrivals(samples, record, live, noise_stop_s, settings)
     rows = np.flatnonzero(live & (arrivals.confidence >= settings.show_confidence))
     onsets = _read_record(samples, record, arrivals, noise_stop_s, rows, settings.noise_order)
-    # arrivals found by strength are late; how late, the clear readings say
-    late = [arrivals.expected_s[row] - onset.time_s for row, onset in onsets.items() if onset.sigma_s < _CLEAR_S]
-    shift = float(np.median(late)) if len(late) >= 3 else _USUALLY_LATE_S
     columns = {name: np.full(traces, np.nan) for name in ("time", "sigma", "early", "late", "reading", "bias")}
+    confidence = np.zeros(traces)
     for row, onset in onsets.items():
-        sigma = float(np.hypot(arrivals.expected_sigma_s[row], _NEIGHBOUR_SIGMA_S))
-        median, spread, early, late_s = _with_neighbours(onset, float(arrivals.expected_s[row]) - shift, sigma)
-        values = (median, spread, early, late_s, onset.sigma_s, onset.bias_removed_s)
+        early_s, late_s = (
+            onset.time_s + at for at in (-_NORMAL_95 * onset.sigma_early_s, _NORMAL_95 * onset.sigma_late_s)
+        )
+        values = (onset.time_s, onset.sigma_s, early_s, late_s, onset.reading_sigma_s, onset.bias_removed_s)
         for name, value in zip(columns, values, strict=True):
             columns[name][row] = value
+        confidence[row] = arrivals.confidence[row] * expit(_GUST_DAMPING * onset.evidence)
     found = np.isfinite(columns["time"])
-    confidence = np.where(found, arrivals.confidence, 0.0)
     state = np.where(found, np.where(confidence >= settings.keep_confidence, "kept", "dropped"), "none")
     return PickTable(
         record=np.full(traces, record.record),

@@ -32,6 +32,8 @@ class DemoCoverage:
     picks_held: float
     upper_m_s: float
     lower_m_s: float
+    upper_held: float
+    lower_held: float
     shallow_share: float
 
 
@@ -55,7 +57,9 @@ def as_records(recorded: RecordedSurvey) -> list[ShotRecord]:
 def coverage(survey: SyntheticSurvey, seeds: range, noise: FieldNoise, draws: int = 400) -> DemoCoverage:
     """Coverage over seeds of noise laid on one survey's clean waveforms."""
     true = survey.depth_m[0]
-    held, errors, widths, kept, pick_errors, pick_held, velocities, shallow = [], [], [], [], [], [], [], []
+    held, errors, widths, kept, pick_errors, pick_held, shallow = [], [], [], [], [], [], []
+    velocities, velocities_held = [], []
+    true_m_s = np.array([layer.vp_m_s for layer in survey.model.layers])
     for seed in seeds:
         recorded = survey.noisy(seed, noise)
         picks = pick_records(as_records(recorded))
@@ -72,9 +76,12 @@ def coverage(survey: SyntheticSurvey, seeds: range, noise: FieldNoise, draws: in
         pick_errors.append(picks.time_s[used] - onset[used])
         pick_held.append((picks.early_s[used] <= onset[used]) & (onset[used] <= picks.late_s[used]))
         velocities.append(np.median(section.velocity_m_s, axis=1))
+        slowest, fastest = section.velocity_interval_90_m_s.mean(axis=2)
+        velocities_held.append((slowest <= true_m_s) & (true_m_s <= fastest))
         shallow.append(section.depth_m[0, known] < true[known])
     error = np.concatenate(errors)
     upper, lower = np.median(velocities, axis=0)
+    upper_held, lower_held = np.mean(velocities_held, axis=0)
     return DemoCoverage(
         held=float(np.mean(np.concatenate(held))),
         median_depth_error=float(np.median(np.abs(error))),
@@ -85,6 +92,8 @@ def coverage(survey: SyntheticSurvey, seeds: range, noise: FieldNoise, draws: in
         picks_held=float(np.mean(np.concatenate(pick_held))),
         upper_m_s=float(upper),
         lower_m_s=float(lower),
+        upper_held=float(upper_held),
+        lower_held=float(lower_held),
         shallow_share=float(np.mean(np.concatenate(shallow))),
     )
 

@@ -7,7 +7,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -20,6 +20,7 @@ LENGTH_S = 0.2
 INTERVALS_S = (0.000125, 0.00025, 0.0005, 0.001)
 DRIFT_HZ = 4.0
 AIC_ASTRAY_S = 0.005
+CLEAR = 10.0  # an onset is seen beyond doubt where its log-likelihood over noise alone is larger than this
 NOISE_KINDS = ("white", "red", "drift", "wind")
 
 
@@ -31,33 +32,55 @@ class LibraryGather:
     interval_s: float
     onset_s: FloatArray
     ratio: FloatArray
-    frequency_hz: FloatArray
 
 
-def first_arrival(rng: np.random.Generator, time_s: FloatArray) -> tuple[FloatArray, float]:
-    """Draw one wave that starts at time zero like t^1 to t^3 and whose first swing has peak 1, and its frequency."""
-    frequency = float(np.exp(rng.uniform(np.log(20.0), np.log(150.0))))
-    growth = rng.uniform(1.0, 3.0)
-    kind = int(rng.integers(3))
-    fine = np.linspace(0, 1.5 / frequency, 1500)
+@dataclass(frozen=True)
+class Wave:
+    """A way in which first arrivals of one survey start: `growth` is the power of time of the first motion."""
+
+    kind: int
+    growth: float
+    frequency_hz: float
+    damping: float
+    rise: float
+    balance: float
+
+
+def draw_wave(rng: np.random.Generator) -> Wave:
+    """Draw the wave of a survey: it starts like t^1 to t^4, at 20 to 150 Hz.
+
+    A blow pushes at first like t to t^3. A body wave from it grows one power slower at depth, a wave along the ground
+    or the refractor as fast or one power faster, one in two dimensions half a power more, an attenuated one more.
+    """
+    return Wave(
+        kind=int(rng.integers(3)),
+        growth=rng.uniform(1.3, 5.0),
+        frequency_hz=float(np.exp(rng.uniform(np.log(15.0), np.log(120.0)))),
+        damping=rng.uniform(0.1, 0.5),
+        rise=rng.uniform(0.1, 1.0),
+        balance=rng.uniform(0.3, 0.6),
+    )
+
+
+def first_arrival(wave: Wave, time_s: FloatArray) -> FloatArray:
+    """The wave, starting at time zero, its first swing of peak 1."""
+    frequency, growth = wave.frequency_hz, wave.growth
 
     def shape(t: FloatArray) -> FloatArray:
-        t = np.maximum(t, 0.0)
-        phase = 2 * np.pi * frequency * t
-        if kind == 0:  # damped sinusoid whose envelope grows like a power first
-            return np.asarray(t ** (growth - 1) * np.exp(-damping * phase) * np.sin(phase))
-        if kind == 1:  # damped sinusoid with an envelope that saturates
-            return np.asarray((t / (t + rise)) ** (growth - 1) * np.exp(-damping * phase) * np.sin(phase))
+        t = np.maximum(t, 0.0) * frequency
+        phase = 2 * np.pi * t
+        if wave.kind == 0:  # damped sinusoid whose envelope grows like a power first
+            return np.asarray(t ** (growth - 1) * np.exp(-wave.damping * phase) * np.sin(phase))
+        if wave.kind == 1:  # damped sinusoid with an envelope that saturates
+            envelope = (t / (t + wave.rise)) ** (growth - 1)
+            return np.asarray(envelope * np.exp(-wave.damping * phase) * np.sin(phase))
         # minimum phase: difference of two gamma pulses, as a source behind an absorbing ground
-        return np.asarray((frequency * t) ** growth * np.exp(-1.3 * phase) * (1 - balance * phase))
+        return np.asarray(t**growth * np.exp(-1.3 * phase) * (1 - wave.balance * phase))
 
-    damping = rng.uniform(0.1, 0.5)
-    rise = rng.uniform(0.05, 1.0) / frequency
-    balance = rng.uniform(0.3, 0.6)
-    reference = np.abs(shape(fine))
+    reference = np.abs(shape(np.linspace(0, 1.5 / frequency, 1500)))
     peaks = np.flatnonzero((reference[1:-1] >= reference[:-2]) & (reference[1:-1] > reference[2:]))
     peak = reference[1 + peaks[0]] if peaks.size else reference.max()
-    return shape(time_s) / peak * rng.choice([-1.0, 1.0]), frequency
+    return np.asarray(shape(time_s) / peak)
 
 
 def ground_roll(rng: np.random.Generator, time_s: FloatArray) -> FloatArray:
@@ -92,7 +115,7 @@ def noise(rng: np.random.Generator, kind: str, shape: tuple[int, int], interval_
 def gather(
     rng: np.random.Generator, ratio: float | None = None, interval_s: float | None = None, traces: int = 24
 ) -> LibraryGather:
-    """Draw traces with one kind of noise, each with its own shape, onset and ground roll.
+    """Draw traces with one kind of noise and one wave, each with its own onset and ground roll.
 
     `ratio` is the peak of the first swing over the standard deviation of the noise; drawn from 1.5 to 300 unless given.
     """
@@ -102,22 +125,31 @@ def gather(
     samples = noise(rng, kind, (traces, time_s.size), interval)
     onset = rng.uniform(0.02, 0.05, traces)
     ratios = np.full(traces, ratio) if ratio is not None else np.exp(rng.uniform(np.log(1.5), np.log(300), traces))
-    frequency = np.empty(traces)
+    common = draw_wave(rng)
     for row in range(traces):
-        wave, frequency[row] = first_arrival(rng, time_s - onset[row])
-        roll = ground_roll(rng, time_s - onset[row] - rng.uniform(0.004, 0.04))
-        samples[row] += ratios[row] * (wave + roll)
-    return LibraryGather(samples, interval, onset, ratios, frequency)
+        # the ground changes the wave a little on its way
+        own = replace(
+            common,
+            growth=max(1.0, common.growth + rng.normal(0.0, 0.2)),
+            frequency_hz=common.frequency_hz * float(np.exp(rng.normal(0.0, 0.1))),
+        )
+        first = rng.choice([-1.0, 1.0]) * first_arrival(own, time_s - onset[row])
+        roll = ground_roll(rng, time_s - onset[row] - float(np.exp(rng.uniform(np.log(0.001), np.log(0.04)))))
+        samples[row] += ratios[row] * (first + roll)
+    return LibraryGather(samples, interval, onset, ratios)
 
 
 def readings(rng: np.random.Generator, gathers: int, ratio: float | None = None) -> FloatArray:
-    """Read the onsets of some gathers: rows of (median, width, log-likelihood, AIC onset, truth, ratio, interval)."""
+    """Read the onsets of some gathers.
+
+    Rows of median, width, log-likelihood, AIC onset, true onset, ratio, gather, growth.
+    """
     from picker.conditioning import fit_noise, remove_drift
     from picker.onsets import aic
-    from picker.reading import READING, blocks_for_reading, prepare, read_onset
+    from picker.reading import READING, blocks_for_reading, neighbours_growth, prepare, read_onset, score_onset
 
     rows = []
-    for _ in range(gathers):
+    for number in range(gathers):
         drawn = gather(rng, ratio)
         samples = remove_drift(drawn.samples, drawn.interval_s, DRIFT_HZ)
         blocks, factor = blocks_for_reading(samples, drawn.interval_s)
@@ -126,40 +158,91 @@ def readings(rng: np.random.Generator, gathers: int, ratio: float | None = None)
         stop = np.full(drawn.onset_s.size, int((PRE_TRIGGER_S - 0.002) / interval))
         noise_model = fit_noise(blocks, first, stop, 12)
         reader = prepare(noise_model, drawn.interval_s, factor)
-        for row, truth in enumerate(drawn.onset_s.tolist()):
-            # where the gather as a whole puts the arrival: late, as every detector of amplitudes
-            about = truth + rng.uniform(-0.0015, 0.0025)
-            found = read_onset(reader, blocks[row], noise_model.level[row], -PRE_TRIGGER_S, about)
-            if found is None:
-                continue
-            begin = int((about - READING.before_s + PRE_TRIGGER_S) / drawn.interval_s)
-            end = int((about + READING.after_s + PRE_TRIGGER_S) / drawn.interval_s)
+        # where the gather as a whole puts the arrival: late, as every detector of amplitudes, and badly in strong noise
+        about = drawn.onset_s + rng.uniform(-0.0015, 0.0025, drawn.onset_s.size) * (1 + 3 / drawn.ratio)
+        scores = [
+            score_onset(reader, block, level, -PRE_TRIGGER_S, at)
+            for block, level, at in zip(blocks, noise_model.level, about.tolist(), strict=True)
+        ]
+        # offsets go with the ratios: the weak traces are the far ones
+        growth = neighbours_growth(scores, -drawn.ratio)
+        for row, (score, log_growth) in enumerate(zip(scores, growth, strict=True)):
+            found = read_onset(score, log_growth)
+            begin = int((about[row] - READING.before_s + PRE_TRIGGER_S) / drawn.interval_s)
+            end = int((about[row] + READING.after_s + PRE_TRIGGER_S) / drawn.interval_s)
             late = -PRE_TRIGGER_S + (begin + int(np.argmin(aic(samples[row, begin:end]))) + 0.5) * drawn.interval_s
-            rows.append((found.median_s, found.width_s, found.log_likelihood, late, truth, drawn.ratio[row], interval))
+            brief = (found.median_s, found.width_s, found.log_likelihood)
+            rows.append((*brief, late, drawn.onset_s[row], drawn.ratio[row], number, found.growth))
     return np.array(rows)
 
 
-def fit(table: FloatArray, nodes: int = 14) -> dict[str, object]:
-    """Quantiles of standardised errors in `nodes` groups of equal size by evidence, smoothed over three groups."""
-    median, width, evidence, late, truth = table[:, :5].T
-    order = np.argsort(evidence)
-    groups = np.array_split(order, nodes)
-    joined = [np.concatenate(groups[max(0, k - 1) : k + 2]) for k in range(nodes)]
-    at = [round(float(np.log10(max(np.median(evidence[group]), 1e-3))), 4) for group in groups]
-    levels = [0.05, 0.16, 0.5, 0.84, 0.95]
-    errors = [np.quantile((truth - median)[g] / width[g], levels).round(4).tolist() for g in joined]
+GROWTHS = (1.75, 2.5, 3.25)
+LOG_EVIDENCE = (0.0, 0.5, 1.0, 1.5, 2.0, 2.5, 3.0, 3.5, 4.0, 4.5, 5.0, 6.0)
+# how far a reading may lie from a node, in growth and in decades of evidence, to count for it (standard deviations)
+REACH = (0.25, 0.3)
+
+
+def quantiles(value: FloatArray, weight: FloatArray, levels: tuple[float, ...]) -> FloatArray:
+    """Quantiles of weighted values."""
+    order = np.argsort(value)
+    share = np.cumsum(weight[order]) - 0.5 * weight[order]
+    return np.interp(np.asarray(levels) * weight.sum(), share, value[order])
+
+
+def fit(table: FloatArray) -> dict[str, object]:
+    """Quantiles of standardised errors, and how late AIC is, about every node of growth and evidence."""
+    from picker.late_bias import LEVELS
+
+    median, width, likelihood, late, truth = table[:, :5].T
+    growth, evidence = table[:, 7], np.log10(np.maximum(likelihood, 1e-3))
+    error, aic_late = (truth - median) / width, (late - truth) / width
+    # where AIC finds noise instead of the onset it says nothing of lateness
+    onset = np.abs(late - truth) < AIC_ASTRAY_S
+    errors, lateness = [], []
+    for at in GROWTHS:
+        weights = [
+            np.exp(-0.5 * ((growth - at) / REACH[0]) ** 2 - 0.5 * ((evidence - node) / REACH[1]) ** 2)
+            for node in LOG_EVIDENCE
+        ]
+        errors.append([quantiles(error, weight, LEVELS).round(4).tolist() for weight in weights])
+        lateness.append([round(float(quantiles(aic_late[onset], w[onset], (0.5,))[0]), 4) for w in weights])
     return {
         "made_by": "python tests/onset_library.py",
         "readings": int(table.shape[0]),
-        "levels": levels,
-        "log10_evidence": at,
+        "growth": GROWTHS,
+        "levels": LEVELS,
+        "log10_evidence": LOG_EVIDENCE,
         "standardised_error_quantiles": errors,
-        # where AIC finds noise instead of the onset it says nothing of lateness
-        "aic_late": [
-            round(float(np.median(((late - truth) / width)[g[np.abs(late - truth)[g] < AIC_ASTRAY_S]])), 4)
-            for g in joined
-        ],
+        "aic_late": lateness,
     }
+
+
+def common_share(table: FloatArray, levels: dict[str, object]) -> float:
+    """What the onsets of one gather are off together, as a share of the bias removed: standard deviation over gathers.
+
+    A least-squares factor for each gather; what chance adds to its spread is taken off.
+    """
+    from picker.late_bias import Calibration, calibrate
+    from picker.reading import Reading
+
+    columns = (
+        np.array(levels[name]) for name in ("growth", "log10_evidence", "standardised_error_quantiles", "aic_late")
+    )
+    calibration = Calibration(*columns, common_share=0.0)
+    factor, chance = [], []
+    for rows in (table[table[:, 6] == number] for number in np.unique(table[:, 6])):
+        onsets = [calibrate(Reading(row[0], row[1], row[2], row[7]), 1e-6, calibration) for row in rows]
+        error = np.array([onset.time_s for onset in onsets]) - rows[:, 4]
+        bias = np.array([onset.bias_removed_s for onset in onsets])
+        sigma = np.array([onset.sigma_s for onset in onsets])
+        clear = (rows[:, 2] > CLEAR) & (np.abs(error) < 4 * sigma)
+        if clear.sum() < 6:
+            continue
+        weight = 1 / sigma[clear] ** 2
+        information = np.sum(weight * bias[clear] ** 2)
+        factor.append(np.sum(weight * error[clear] * bias[clear]) / information)
+        chance.append(1 / information)
+    return float(np.sqrt(max(np.var(factor) - np.mean(chance), 0.0)))
 
 
 def main() -> None:
@@ -167,9 +250,11 @@ def main() -> None:
     import json
     from pathlib import Path
 
-    table = readings(np.random.default_rng(20261201), 600)
+    table = readings(np.random.default_rng(20261201), 1000)
     path = Path(__file__).resolve().parent.parent / "picker" / "data" / "onset_bias.json"
-    path.write_text(json.dumps(fit(table), indent=1) + "\n", encoding="utf-8")
+    levels = fit(table)
+    levels["common_share"] = round(common_share(table, levels), 4)
+    path.write_text(json.dumps(levels, indent=1) + "\n", encoding="utf-8")
 
 
 if __name__ == "__main__":

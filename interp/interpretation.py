@@ -175,8 +175,8 @@ def _observations(used: PickTable, line: Line) -> Observations:
     first = np.array([int(np.flatnonzero(record_of == number)[0]) for number in range(records.size)])
     static = np.zeros(line.station_along_m.size)
     np.maximum.at(static, line.station_of, np.nan_to_num(used.geophone_sigma_s))
-    # what neighbours lent is not counted twice; what is left of the late bias changes with the wave from pick to pick, so
-    # that it stays in each pick's error beside the part that is common to all
+    # what neighbours lent is not counted twice; what is left of the late bias changes with the wave from pick to pick,
+    # so that it stays in each pick's error beside the part that is common to all
     sigma = np.maximum(np.fmax(used.sigma_s, used.reading_sigma_s), LEAST_SIGMA_S)
     # 5 % and 95 % points of a normal stand 1.645 standard deviations out
     early = np.where(np.isfinite(used.early_s), (used.time_s - used.early_s) / 1.645, sigma)

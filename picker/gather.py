@@ -116,7 +116,7 @@ def _sides(record: ShotRecord) -> IntArray:
 
 @dataclass(frozen=True, eq=False)
 class Arrivals:
-    """Where the first arrivals of a record are, to the coarse sample interval, and how sure that is; shape (traces,)."""
+    """Where the first arrivals of a record are, to the coarse interval, and how sure that is; shape (traces,)."""
 
     time_s: FloatArray
     confidence: FloatArray
@@ -170,7 +170,8 @@ def find_arrivals(
     )
     origin = float(record.start_s.min())
     skip = max(0, int(np.floor((-settings.slack_s - origin) / interval_s)))
-    grid: FloatArray = origin + interval_s * np.arange(skip, max(skip + 2, int(np.ceil((last - origin) / interval_s))))
+    stop_at = max(skip + 2, int(np.ceil((last - origin) / interval_s)))
+    grid = np.asarray(origin + interval_s * np.arange(skip, stop_at), dtype=np.float64)
     likelihood, seen = _likelihoods(scores, earliest, record, grid, interval_s, factor)
     result = Arrivals(np.full(traces, np.nan), np.zeros(traces))
     side = _sides(record)

@@ -105,7 +105,7 @@ def lay_out_line(picks: PickTable) -> Line:
     station_of = rank[station_of]
     steps = np.hypot(*np.diff(stations[:, :2], axis=0).T)
     station_along = np.concatenate([[0.0], np.cumsum(steps)])
-    shot_along = np.array([_along_chain(place[:2], stations[:, :2], station_along) for place in shots])
+    shot_along = np.array([along_chain(place[:2], stations[:, :2], station_along) for place in shots])
     shot_order = np.argsort(shot_along, kind="stable")
     shot_rank = np.empty_like(shot_order)
     shot_rank[shot_order] = np.arange(shot_order.size)
@@ -132,8 +132,23 @@ def _places(xyz: FloatArray) -> tuple[FloatArray, IntArray]:
     return xyz[first], np.asarray(inverse).reshape(-1).astype(np.int64)
 
 
-def _along_chain(point: FloatArray, chain: FloatArray, along: FloatArray) -> float:
-    """Distance along a chain of points at the foot of a point; the end pieces are prolonged."""
+def along_chain(point: FloatArray, chain: FloatArray, along: FloatArray) -> float:
+    """Distance along a chain of points at the foot of a point; the end pieces are prolonged.
+
+    Parameters
+    ----------
+    point : float (2,)
+        Horizontal position, metres.
+    chain : float (points, 2)
+        Horizontal positions of at least two different points, in their order along the line, metres.
+    along : float (points,)
+        Their distances along the line, metres.
+
+    Returns
+    -------
+    float
+        Metres.
+    """
     start, stop = chain[:-1], chain[1:]
     piece = stop - start
     length2 = np.maximum(np.sum(piece**2, axis=1), 1e-12)

@@ -54,7 +54,7 @@ def depth_table(section: DepthSection, units: str) -> TextTable:
         "coverage": shown["coverage"],
         "picks": shown["picks"],
     }
-    return _with_notes(columns, shown["note"])
+    return with_notes(columns, shown["note"])
 
 
 def velocity_table(section: DepthSection, units: str) -> TextTable:
@@ -69,11 +69,23 @@ def velocity_table(section: DepthSection, units: str) -> TextTable:
         "to": shown[f"velocity_hi_{units}_s"],
         "picks": shown["picks"],
     }
-    return _with_notes(columns, shown["note"])
+    return with_notes(columns, shown["note"])
 
 
-def _with_notes(columns: dict[str, list[str]], notes: list[str]) -> TextTable:
-    """Put a letter for its note at the end of every row that has one; notes beyond the letters share the last."""
+def with_notes(columns: dict[str, list[str]], notes: list[str]) -> TextTable:
+    """Put a letter for its note at the end of every row that has one; notes beyond the letters share the last.
+
+    Parameters
+    ----------
+    columns : dict of str to list of str
+        Cells by the header of their column.
+    notes : list of str
+        The note of every row; empty where there is none.
+
+    Returns
+    -------
+    TextTable
+    """
     distinct = list(dict.fromkeys(note for note in notes if note))
     if distinct:
         marks = {note: _MARKS[min(number, len(_MARKS) - 1)] for number, note in enumerate(distinct)}

@@ -137,5 +137,5 @@ def png_bytes(figure: Figure, dpi: int = DPI) -> bytes:
     picture = Image.fromarray(np.asarray(canvas.buffer_rgba())[:, :, :3].copy())
     few = picture.quantize(COLOURS_KEPT, method=Image.Quantize.FASTOCTREE, dither=Image.Dither.NONE)
     stream = io.BytesIO()
-    few.save(stream, format="png", dpi=(dpi, dpi), compress_level=9)
+    few.save(stream, format="png", dpi=(dpi, dpi), compress_level=6)
     return stream.getvalue()

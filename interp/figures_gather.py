@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
 import numpy.typing as npt
@@ -25,7 +26,9 @@ from interp.figure_style import (
 from interp.line import along_chain
 from interp.section import DepthSection
 from picker.picks import PickTable
-from picker.records import ShotRecord
+
+if TYPE_CHECKING:
+    from picker.records import ShotRecord
 
 FloatArray = npt.NDArray[np.float64]
 

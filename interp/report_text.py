@@ -209,7 +209,7 @@ def in_the_intervals(section: DepthSection) -> list[str]:
         "The error of reading each onset, skewed as it is; errors that all picks of a record share (time break), that "
         "all picks at a geophone share, and that all picks share (late bias); which branch a pick is on; and how "
         "quickly depth and velocity may change along the line.",
-        f"They hold for ground of {section.layers + 1} layers whose velocities change along the line but not with depth.",
+        f"They hold for ground of {section.layers + 1} layers whose velocities change along the line, not with depth.",
     ]
     numbers = sorted(section.refractor_probability.items())
     if numbers:

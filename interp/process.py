@@ -269,8 +269,9 @@ def report_stage(survey: Survey, directory: Path, units: str, title: str) -> Non
         created=datetime.date.today().isoformat(),
     )
     make_folder(directory)
-    click.echo("Drawing the figures.", err=True)
-    click.echo(f"Report: {write_report(directory, content, units=units)}")
+    with click.progressbar(length=max(1, len(numbers)), label="Drawing", file=sys.stderr) as bar:
+        path = write_report(directory, content, units, progress=lambda done, _all: bar.update(done - bar.pos))
+    click.echo(f"Report: {path}")
 
 
 def process_files(

@@ -26,6 +26,7 @@ PAGE_WIDTH_MM = 180.0  # A4 less its margins
 MM_PER_INCH = 25.4
 DPI = 170
 COLOURS_KEPT = 128  # a figure of lines and tints needs no more, and its file is a third of the size
+_NEARLY_WHITE = 250
 
 # Told apart by people with any of the common kinds of colour blindness: the colours differ in lightness as well as hue.
 INK = "#23282e"
@@ -136,6 +137,9 @@ def png_bytes(figure: Figure, dpi: int = DPI) -> bytes:
         canvas.draw()
     picture = Image.fromarray(np.asarray(canvas.buffer_rgba())[:, :, :3].copy())
     few = picture.quantize(COLOURS_KEPT, method=Image.Quantize.FASTOCTREE, dither=Image.Dither.NONE)
+    palette = np.array(few.getpalette("RGB"), dtype=np.uint8).reshape(-1, 3)
+    palette[(palette >= _NEARLY_WHITE).all(axis=1)] = 255  # paper is white; choosing colours makes it a little grey
+    few.putpalette(palette.tobytes(), "RGB")
     stream = io.BytesIO()
     few.save(stream, format="png", dpi=(dpi, dpi), compress_level=6)
     return stream.getvalue()

@@ -16,7 +16,7 @@ from picker.picks import PICK_STATES, PickTable
 
 FloatArray = npt.NDArray[np.float64]
 
-_LEFT_MM, _HALF_MM, _HEIGHT_MM, _BARS_MM = 16.0, 72.0, 52.0, 30.0
+_LEFT_MM, _HALF_MM, _HEIGHT_MM, _BARS_MM, _FOOT_MM = 16.0, 72.0, 52.0, 30.0, 16.0
 _BEYOND = 5.0  # residuals farther out than this many stated errors are put on the edge
 _STATE_COLOURS = {"kept": "#17508f", "dropped": "#e08214", "none": "#c9cdd2"}
 _STATE_WORDS = {"kept": "kept", "dropped": "dropped", "none": "none: no onset to be had"}
@@ -39,11 +39,11 @@ def pick_quality_figure(picks: PickTable, section: DepthSection, units: str = "m
     -------
     Figure
     """
-    figure = new_figure(20.0 + _BARS_MM + 17.0 + _HEIGHT_MM + 8.0)
-    bottom = 20.0 + _BARS_MM + 17.0
+    figure = new_figure(_FOOT_MM + _BARS_MM + 17.0 + _HEIGHT_MM + 8.0)
+    bottom = _FOOT_MM + _BARS_MM + 17.0
     _errors(axes_at(figure, _LEFT_MM, bottom, _HALF_MM, _HEIGHT_MM), picks, units)
     _residuals(axes_at(figure, PAGE_WIDTH_MM - 4.0 - _HALF_MM, bottom, _HALF_MM, _HEIGHT_MM), section)
-    _states(axes_at(figure, _LEFT_MM, 20.0, PAGE_WIDTH_MM - 4.0 - _LEFT_MM, _BARS_MM), picks)
+    _states(axes_at(figure, _LEFT_MM, _FOOT_MM, PAGE_WIDTH_MM - 4.0 - _LEFT_MM, _BARS_MM), picks)
     handles = [
         mark(marker="s", markersize=4, color=colour, label=_STATE_WORDS[state])
         for state, colour in _STATE_COLOURS.items()
@@ -111,10 +111,8 @@ def _residuals(axes: Axes, section: DepthSection) -> None:
         )
     axes.set_ylim(-_BEYOND * 1.06, _BEYOND * 1.06)
     axes.set_xlim(0, 1.05 * float(sigma_ms.max(initial=1e-3)))
-    inside = float(np.mean(np.abs(residual[believed]) <= NORMAL_90)) if believed.any() else np.nan
-    axes.set_title(
-        f"Residual against stated error ({inside:.0%} in the shade; 90 % if normal)" if believed.any() else ""
-    )
+    share = f": {np.mean(np.abs(residual[believed]) <= NORMAL_90):.0%} in the shade" if believed.any() else ""
+    axes.set_title(f"Residual against stated error{share}")
     axes.set_xlabel("standard error of the pick (ms); hollow: set aside")
     axes.set_ylabel("residual / standard error")
 

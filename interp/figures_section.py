@@ -39,10 +39,11 @@ from picker.units import columns_in
 FloatArray = npt.NDArray[np.float64]
 
 _LEFT_MM, _WIDTH_MM = 16.0, PAGE_WIDTH_MM - 20.0
-_SECTION_MM, _DEPTH_MM = 66.0, 40.0
+_SECTION_MM, _DEPTH_MM = 58.0, 34.0
 _EXAGGERATIONS = (0.5, 1.0, 1.5, 2.0, 2.5, 3.0, 4.0, 5.0, 6.0, 8.0, 10.0)
-_HALF_SPACE = 0.3  # share of the section's height kept below the deepest point, where the last velocity is written
-_TOP = 0.1
+_HALF_SPACE = 0.22  # share of the section's height kept below the deepest point, where the last velocity is written
+_TOP = 0.14
+_LEGEND_COLUMNS, _LEGEND_ROW_MM = 4, 4.5
 _NAMED_SHOTS = 5
 _THIN_MM = 8.0  # a layer thinner than this on the page has room for one line of text
 _LINES = {"two": "-", "one": (0, (4, 1.5)), "none": (0, (1, 1.5))}
@@ -67,21 +68,21 @@ def section_figure(section: DepthSection, picks: PickTable, units: str = "m") ->
         Shades are 90 % intervals of depth; bounds from what first arrivals cannot decide are drawn apart from them.
         A point where a refractor was not seen has an arrow from the depth that it must exceed.
     """
-    with_depths = section.layers > 0
-    below_mm = _DEPTH_MM + 7.0 if with_depths else 0.0
-    figure = new_figure(20.0 + below_mm + _SECTION_MM + 8.0)
-    upper = axes_at(figure, _LEFT_MM, 20.0 + below_mm, _WIDTH_MM, _SECTION_MM)
     drawing = _Drawing(section, picks, units)
+    handles = drawing.legend()
+    foot_mm = 11.0 + _LEGEND_ROW_MM * -(-len(handles) // _LEGEND_COLUMNS)
+    below_mm = _DEPTH_MM + 7.0 if section.layers else 0.0
+    figure = new_figure(foot_mm + below_mm + _SECTION_MM + 8.0)
+    lowest = upper = axes_at(figure, _LEFT_MM, foot_mm + below_mm, _WIDTH_MM, _SECTION_MM)
     drawing.section(upper)
-    lowest = upper
-    if with_depths:
-        lowest = axes_at(figure, _LEFT_MM, 20.0, _WIDTH_MM, _DEPTH_MM)
+    if section.layers:
+        lowest = axes_at(figure, _LEFT_MM, foot_mm, _WIDTH_MM, _DEPTH_MM)
         upper.tick_params(labelbottom=False)
         lowest.set_xlim(upper.get_xlim())
         drawing.depths(lowest)
     lowest.set_xlabel(f"distance along the line ({units})")
-    handles = drawing.legend()
-    figure.legend(handles=handles, loc="lower left", bbox_to_anchor=(_LEFT_MM / PAGE_WIDTH_MM - 0.01, 0.0), ncols=4)
+    corner = (_LEFT_MM / PAGE_WIDTH_MM - 0.01, 0.0)
+    figure.legend(handles=handles, loc="lower left", bbox_to_anchor=corner, ncols=_LEGEND_COLUMNS)
     return figure
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
 
@@ -66,7 +67,9 @@ def depths_of_geophones(section: DepthSection, units: str) -> TextTable:
         "coverage": shown["coverage"],
         "picks": shown["picks"],
     }
-    return with_notes(table, shown["note"])
+    # in the CSV file the depth that must be exceeded has a column of its own, here it stands in its place
+    notes = [re.sub(r"\bdeeper_than(_m)?\b", "told", note) for note in shown["note"]]
+    return with_notes(table, notes)
 
 
 def records_table(section: DepthSection, picks: PickTable, units: str) -> TextTable:
@@ -147,20 +150,26 @@ def plane_pairs_table(section: DepthSection, pairs: Sequence[PlanePair], units: 
         f"{_ms(float(pair.layers.reciprocal_mismatch_s[0]))} \u00b1 {_ms(float(pair.layers.reciprocal_sigma_s[0]))}"
         for pair in pairs
     ]
-    table = {
-        "records": [f"{pair.record_a}, {pair.record_b}" for pair in pairs],
-        f"shots at ({units})": [
-            f"{a}, {b}" for a, b in zip(shown[f"along_a_{units}"], shown[f"along_b_{units}"], strict=True)
-        ],
-        f"velocity above ({units}/s)": with_error(f"upper_{units}_s", f"upper_sigma_{units}_s"),
-        f"below ({units}/s)": with_error(f"lower_{units}_s", f"lower_sigma_{units}_s"),
-        "dip (\u00b0)": degrees,
-        "reciprocal mismatch (ms)": mismatch,
-    }
+    header = [
+        "records",
+        f"shots at ({units})",
+        f"velocity above ({units}/s)",
+        f"below ({units}/s)",
+        "dip (\u00b0)",
+        "reciprocal mismatch (ms)",
+    ]
+    columns_shown = [
+        [f"{pair.record_a}, {pair.record_b}" for pair in pairs],
+        [f"{a}, {b}" for a, b in zip(shown[f"along_a_{units}"], shown[f"along_b_{units}"], strict=True)],
+        with_error(f"upper_{units}_s", f"upper_sigma_{units}_s"),
+        with_error(f"lower_{units}_s", f"lower_sigma_{units}_s"),
+        degrees,
+        mismatch,
+    ]
     for end, name in (("a", "first"), ("b", "second")):
-        table[f"depth at {name} ({units})"] = with_error(f"depth_{end}_{units}", f"sigma_{end}_{units}")
-        table[f"section there ({units})" + ("" if end == "a" else " ")] = shown[f"section_{end}_{units}"]
-    return TextTable(tuple(table), list(zip(*table.values(), strict=True)), [])
+        header += [f"depth at {name} shot ({units})", "section there"]
+        columns_shown += [with_error(f"depth_{end}_{units}", f"sigma_{end}_{units}"), shown[f"section_{end}_{units}"]]
+    return TextTable(tuple(header), list(zip(*columns_shown, strict=True)), [])
 
 
 def changes_table(log: Sequence[LogEntry]) -> TextTable:

@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from interp.section import DepthSection
-from interp.section_tables import cells, depth_columns, velocity_columns
+from interp.section_tables import Columns, cells, depth_columns, velocity_columns
 from picker.picks import PickTable
 from picker.units import columns_in
 
@@ -95,47 +95,41 @@ def answer(section: DepthSection, units: str) -> list[str]:
     list of str
         Sentences with the numbers of the depth and velocity tables.
     """
-    told = []
     columns = columns_in(units, depth_columns(section))
-    shown = cells(columns)
-    for layer in range(1, section.layers + 1):
-        rows = np.flatnonzero(columns["layer"] == layer)
-        told.append(_depth_range(columns[f"depth_{units}"], shown, rows, layer, units))
-    if not section.layers:
-        told.append("No refractor was seen in first arrivals.")
-    return told + _velocities(section, units)
+    told = [_depth_range(columns, layer, units, _name(section, layer)) for layer in range(1, section.layers + 1)]
+    return [*(told or ["No refractor was seen in first arrivals."]), *_velocities(section, units)]
 
 
-def _depth_range(
-    depth: np.ndarray[tuple[int, ...], np.dtype[np.generic]],
-    shown: dict[str, list[str]],
-    rows: np.ndarray[tuple[int, ...], np.dtype[np.int64]],
-    layer: int,
-    units: str,
-) -> str:
-    """One sentence on the depth of one refractor from its shallowest to its deepest point."""
-    values = np.asarray(depth[rows], dtype=np.float64)
-    known = np.isfinite(values)
-    if not known.any():
-        least = [shown[f"deeper_than_{units}"][row] for row in rows if shown[f"deeper_than_{units}"][row]]
-        if not least:
-            return f"Refractor {layer} was not seen in first arrivals."
-        low, high = (choose(least, key=float) for choose in (min, max))
-        return (
-            f"No refractor was seen in first arrivals. One there must be deeper than a depth that runs from {low} to "
-            f"{high} {units} along the line (column \u201cdepth\u201d of the table)."
-        )
+def _name(section: DepthSection, layer: int) -> str:
+    """What a refractor is called."""
+    return "the refractor" if section.layers == 1 else f"refractor {layer}"
 
-    def at(row: int) -> str:
-        low, middle, high = (shown[f"{name}_{units}"][row] for name in ("depth_lo", "depth", "depth_hi"))
-        return (
-            f"{middle} {units} (90 % interval {low} to {high}) at {shown[f'along_{units}'][row]} {units} along the line"
-        )
 
-    shallowest, deepest = (int(rows[choose(values)]) for choose in (np.nanargmin, np.nanargmax))
-    if shallowest == deepest:
-        return f"Refractor {layer} lies below ground at {at(shallowest)}."
-    return f"Refractor {layer} lies between {at(shallowest)} and {at(deepest)}, below ground."
+def _depth_range(columns: Columns, layer: int, units: str, name: str) -> str:
+    """Tell the depth of one refractor at its shallowest and deepest points, and how wide its intervals are."""
+    rows = np.flatnonzero(columns["layer"] == layer)
+    shown = {column: [values[row] for row in rows] for column, values in cells(columns).items()}
+    depth = columns[f"depth_{units}"][rows]
+    name = name.capitalize()
+    if not np.isfinite(depth).any():
+        least = [value for value in shown[f"deeper_than_{units}"] if value]
+        told = f"{name} was not seen in first arrivals."
+        if least:
+            low, high = min(least, key=float), max(least, key=float)
+            told += f" If there is one, it is deeper than told under each geophone: than {low} to {high} {units}."
+        return told
+
+    def at(row: int, more: str) -> str:
+        low, middle, high, along = (shown[f"{one}_{units}"][row] for one in ("depth_lo", "depth", "depth_hi", "along"))
+        return f"{middle} {units} below ground ({more}{low} to {high}) at {along} {units} along the line"
+
+    shallowest, deepest = int(np.nanargmin(depth)), int(np.nanargmax(depth))
+    told = f"{name} is {at(shallowest, '90 % interval ')}."
+    if shallowest != deepest:
+        told = f"{name} is shallowest, {at(shallowest, '90 % interval ')}, and deepest, {at(deepest, '')}."
+    width = columns[f"depth_hi_{units}"][rows] - columns[f"depth_lo_{units}"][rows]
+    ends = cells({f"width_{units}": np.array([np.nanmin(width), np.nanmax(width)])})[f"width_{units}"]
+    return f"{told} Its 90 % intervals are {ends[0]} to {ends[1]} {units} wide."
 
 
 def _velocities(section: DepthSection, units: str) -> list[str]:
@@ -158,7 +152,7 @@ def _velocities(section: DepthSection, units: str) -> list[str]:
             )
             if value:
                 stretches.append(f"{value} {units}/s ({low} to {high}) from {start} to {stop} {units}")
-        place = f"above refractor {layer}" if layer <= section.layers else f"below refractor {section.layers}"
+        place = f"above {_name(section, layer)}" if layer <= section.layers else f"below {_name(section, layer - 1)}"
         if not section.layers:
             place = "of the ground"
         if stretches:
@@ -194,7 +188,7 @@ def weak_points(section: DepthSection, units: str) -> list[str]:
                 places = cells(columns_in(units, {"along_m": section.along_m[which]}))[f"along_{units}"]
                 count = "1 geophone" if len(places) == 1 else f"{len(places)} geophones"
                 where = f"{places[0]} {units}" if len(places) == 1 else f"{places[0]} to {places[-1]} {units}"
-                told.append(f"Refractor {layer + 1} {words} under {count} ({where} along the line).")
+                told.append(f"{_name(section, layer + 1).capitalize()} {words} under {count} ({where} along the line).")
     return told
 
 

@@ -16,7 +16,7 @@ from interp.branches import assign_branches
 from interp.control import Control, control_of_stations, least_depth_m
 from interp.ground import lay_ground
 from interp.line import Line, lay_out_line
-from interp.refractor import Observations, Problem, Roughness, Solution, solve
+from interp.refractor import COMMON_SHARE, Observations, Problem, Roughness, Solution, solve
 from interp.section import DepthSection, PickFit
 from interp.spread import Ensemble, branch_probability, draw, weigh_roughness
 from interp.start import branch_start, flat_start
@@ -175,9 +175,10 @@ def _observations(used: PickTable, line: Line) -> Observations:
     first = np.array([int(np.flatnonzero(record_of == number)[0]) for number in range(records.size)])
     static = np.zeros(line.station_along_m.size)
     np.maximum.at(static, line.station_of, np.nan_to_num(used.geophone_sigma_s))
-    # what neighbours lent is not counted twice; what is left of the late bias changes with the wave from pick to pick,
-    # so that it stays in each pick's error beside the part that is common to all
-    sigma = np.maximum(np.fmax(used.sigma_s, used.reading_sigma_s), LEAST_SIGMA_S)
+    # a pick's error holds what is left of the late bias; the part common to all picks is an unknown of its own
+    common = COMMON_SHARE * np.nan_to_num(used.bias_removed_s)
+    alone = np.sqrt(np.maximum(used.sigma_s**2 - common**2, 0.0))
+    sigma = np.maximum(np.fmax(alone, used.reading_sigma_s), LEAST_SIGMA_S)
     # 5 % and 95 % points of a normal stand 1.645 standard deviations out
     early = np.where(np.isfinite(used.early_s), (used.time_s - used.early_s) / 1.645, sigma)
     late = np.where(np.isfinite(used.late_s), (used.late_s - used.time_s) / 1.645, sigma)

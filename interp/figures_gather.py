@@ -54,6 +54,7 @@ class _Traces:
     late_s: FloatArray
     predicted_s: FloatArray
     state: npt.NDArray[np.str_]
+    by_hand: npt.NDArray[np.bool_]
     order: npt.NDArray[np.intp]
     excursion: float
 
@@ -111,7 +112,9 @@ def gather_figure(record: ShotRecord, picks: PickTable, section: DepthSection, u
         mark(marker="$?$", color=QUIET, markersize=4, label="no onset to be had"),
         mark(linestyle="-", color=PREDICTED, linewidth=0.9, label="predicted by the result"),
     ]
-    figure.legend(handles=handles, loc="lower left", bbox_to_anchor=(_LEFT_MM / PAGE_WIDTH_MM - 0.01, 0.0), ncols=5)
+    if traces.by_hand.any():
+        handles.append(mark(marker="o", markersize=5, markerfacecolor="none", markeredgewidth=0.7, label="by hand"))
+    figure.legend(handles=handles, loc="lower left", bbox_to_anchor=(_LEFT_MM / PAGE_WIDTH_MM - 0.01, 0.0), ncols=6)
     return figure
 
 
@@ -144,6 +147,7 @@ def _traces(record: ShotRecord, picks: PickTable, section: DepthSection, units: 
         late_s=of(picks.late_s),
         predicted_s=np.array([predicted.get(channel, np.nan) for channel in channels.tolist()]),
         state=state.astype(np.str_),
+        by_hand=(rows >= 0) & (picks.origin[rows] == "manual") if len(picks) else rows >= 0,
         order=order,
         excursion=_EXCURSION * float(lengths_in(units, spacing_m)),
     )
@@ -226,6 +230,17 @@ def _marks(axes: Axes, traces: _Traces) -> None:
         color=INK,
         markersize=3.5,
         markeredgewidth=0.8,
+        zorder=6,
+    )
+    rings = traces.by_hand & np.isfinite(traces.time_s)
+    axes.plot(
+        traces.along[rings],
+        1e3 * traces.time_s[rings],
+        "o",
+        color=INK,
+        markersize=7,
+        markerfacecolor="none",
+        markeredgewidth=0.7,
         zorder=6,
     )
     for state, words in (("none", "?"), ("dead", "dead")):

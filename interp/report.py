@@ -35,6 +35,7 @@ if TYPE_CHECKING:
 
 MOST_GATHERS = 24  # more than this would make the report too large to send and too long to read
 _TEMPLATE = "report.html.j2"
+_GATHER = "gather_"
 
 
 @dataclass(frozen=True, eq=False)
@@ -90,7 +91,7 @@ def write_report(
     Parameters
     ----------
     directory : Path
-        Made where it is not there. Files of these names are replaced.
+        Made where it is not there. Files of these names are replaced, and gathers of an earlier report taken away.
     content : ReportContent
         What to tell.
     units : str
@@ -113,7 +114,10 @@ def write_report(
     figures.mkdir(parents=True, exist_ok=True)
     section, picks = content.section, content.picks
 
+    names: set[str] = set()
+
     def keep(name: str, png: bytes) -> str:
+        names.add(name)
         _write_whole(figures / f"{name}.png", png)
         return base64.b64encode(png).decode("ascii")
 
@@ -127,11 +131,13 @@ def write_report(
     gathers: list[_Picture] = []
     drawn = 0
     for drawn, record in enumerate(content.records() if content.records is not None else (), start=1):
-        data = keep(f"gather_{record.record:04d}", png_bytes(gather_figure(record, picks, section, units)))
+        data = keep(f"{_GATHER}{record.record:04d}", png_bytes(gather_figure(record, picks, section, units)))
         if record.record in shown:
             gathers.append(_Picture(data, f"Record {record.record} with its picks"))
         if progress is not None:
             progress(drawn, max(total, drawn))
+    for stale in set(figures.glob(f"{_GATHER}*.png")) - {figures / f"{name}.png" for name in names}:
+        stale.unlink()  # of an earlier report: a folder with two surveys in it misleads
     path = directory / "report.html"
     _write_whole(path, _html(content, units, pictures, gathers, drawn).encode("utf-8"))
     return path

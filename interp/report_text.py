@@ -43,10 +43,10 @@ _NOT_IN_THE_INTERVALS = (
 )
 
 _PICKING = (
-    "First arrivals: noise was made white with a filter fitted to each trace's own noise; the onsets of all traces on "
-    "one side of a shot were found together, as the most probable path of times over offset; each onset was then read "
-    "as a likelihood over time, the signal a Gaussian process that starts there (Rasmussen and Williams 2006; Wahba "
-    "1978). Late bias and spread of that reading were measured on a library of onsets and taken into account.",
+    "First arrivals: noise was made white with a filter fitted to it; the onsets of all traces on one side of a shot "
+    "were found together, by the probability of every path of times over offset; each onset was then read as a "
+    "likelihood over time, the signal a Gaussian process that starts there (Rasmussen and Williams 2006; Wahba 1978). "
+    "Late bias and spread of that reading were measured on a library of onsets and taken into account.",
 )
 
 _INTERPRETATION = (

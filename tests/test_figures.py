@@ -287,6 +287,16 @@ def test_a_gather_shows_the_noise_before_the_first_arrivals_and_all_picks(sectio
     assert last_ms > 1e3 * picks.late_s[mine].max()
 
 
+def test_a_pick_changed_by_hand_is_ringed(section, picks):
+    by_hand = np.flatnonzero(picks.origin == "manual")
+    assert by_hand.size == 1
+    record = int(picks.record[by_hand[0]])
+    axes = gather_figure(made_record(picks, record), picks, section).axes[0]
+    (ring,) = points(axes, "o")
+    assert ring[1] == pytest.approx(1e3 * picks.time_s[by_hand[0]])
+    assert not points(gather_figure(made_record(picks, record + 1), picks, section).axes[0], "o")
+
+
 def wide_record(traces: int = 96, samples: int = 6000) -> ShotRecord:
     """Ninety-six channels along the made line, some dead, one of them silent."""
     rng = np.random.default_rng(2)

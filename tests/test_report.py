@@ -418,6 +418,20 @@ def test_records_are_taken_one_by_one(section, tmp_path):
     write_report(tmp_path, content_of(section, records=records))
 
 
+def test_gathers_of_an_earlier_report_are_taken_away_and_nothing_else(section, tmp_path):
+    picks = made_picks(section)
+    write_report(tmp_path, content_of(section, records=lambda: (made_record(picks, number) for number in (1, 2))))
+    (tmp_path / "figures" / "sketch.png").write_bytes(b"a person's own")
+    write_report(tmp_path, content_of(section, records=lambda: (made_record(picks, number) for number in (2,))))
+    assert sorted(path.name for path in (tmp_path / "figures").iterdir()) == [
+        "gather_0002.png",
+        "pick_quality.png",
+        "section.png",
+        "sketch.png",
+        "travel_times.png",
+    ]
+
+
 def test_a_report_that_cannot_be_finished_leaves_the_one_before(section, tmp_path):
     path = write_report(tmp_path, content_of(section, records=None))
     before = path.read_bytes()

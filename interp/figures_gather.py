@@ -32,7 +32,7 @@ if TYPE_CHECKING:
 
 FloatArray = npt.NDArray[np.float64]
 
-_LEFT_MM, _WIDTH_MM, _HEIGHT_MM = 14.0, PAGE_WIDTH_MM - 17.0, 84.0
+_LEFT_MM, _WIDTH_MM, _HEIGHT_MM = 14.0, PAGE_WIDTH_MM - 17.0, 96.0
 _TRACE = "#5d646d"
 _FILL = "#bfc5cb"
 _BEFORE_S = 0.012  # shown before the earliest pick, so that the noise is seen
@@ -134,6 +134,11 @@ def _traces(record: ShotRecord, picks: PickTable, section: DepthSection, units: 
     def of(column: FloatArray) -> FloatArray:
         return np.where(rows >= 0, column[rows], np.nan) if len(picks) else np.full(rows.size, np.nan)
 
+    by_hand = rows >= 0
+    if len(picks):
+        by_hand &= picks.origin[rows] == "manual"
+    # where a whole record came in from somebody, rings would mark nothing
+    by_hand &= not by_hand[rows >= 0].all()
     state = np.where(rows >= 0, picks.state[rows], "none") if len(picks) else np.full(rows.size, "none")
     found: npt.NDArray[np.str_] = record.state  # type: ignore[assignment]
     state = np.where(found[order] == "dead", "dead", state)
@@ -147,7 +152,7 @@ def _traces(record: ShotRecord, picks: PickTable, section: DepthSection, units: 
         late_s=of(picks.late_s),
         predicted_s=np.array([predicted.get(channel, np.nan) for channel in channels.tolist()]),
         state=state.astype(np.str_),
-        by_hand=(rows >= 0) & (picks.origin[rows] == "manual") if len(picks) else rows >= 0,
+        by_hand=by_hand,
         order=order,
         excursion=_EXCURSION * float(lengths_in(units, spacing_m)),
     )

@@ -68,7 +68,7 @@ def _errors(axes: Axes, picks: PickTable, units: str) -> None:
             alpha=0.75,
         )
     by_hand = (picks.origin == "manual") & (sigma_ms > 0)
-    if by_hand.any():
+    if by_hand.any() and not by_hand[sigma_ms > 0].all():
         axes.plot(
             offset[by_hand],
             sigma_ms[by_hand],

@@ -97,7 +97,7 @@ def records_table(section: DepthSection, picks: PickTable, units: str) -> TextTa
     for state in PICK_STATES:
         table[state] = [str(int(np.sum((picks.record == record) & (picks.state == state)))) for record in records]
     manual = picks.origin == "manual"
-    table["by hand"] = [str(int(np.sum((picks.record == record) & manual))) for record in records]
+    table["manual"] = [str(int(np.sum((picks.record == record) & manual))) for record in records]
     errors, misfits, shifts = [], [], []
     for record in records.tolist():
         sigma = picks.sigma_s[(picks.record == record) & picks.kept]

@@ -201,8 +201,8 @@ def in_the_intervals(section: DepthSection) -> list[str]:
     """Say what the 90 % intervals of depth and velocity hold, and on what they are conditioned."""
     told = [
         "The error of reading each onset, skewed as it is; errors that all picks of a record share (time break), that "
-        "all picks at a geophone share, and that all picks share (late bias); which branch a pick is on; and how "
-        "quickly depth and velocity may change along the line.",
+        "all picks at a geophone share, and that all picks share (late bias), as far as the picks came with them; "
+        "which branch a pick is on; and how quickly depth and velocity may change along the line.",
         f"They hold for ground of {section.layers + 1} layers whose velocities change along the line, not with depth.",
     ]
     numbers = sorted(section.refractor_probability.items())
@@ -275,7 +275,7 @@ def missing_errors(picks: PickTable) -> list[str]:
         (np.isnan(picks.confidence), "came without a confidence; they were taken for first arrivals"),
     )
     told = [f"{count} of {total} kept picks {words}." for which, words in cases if (count := int(np.sum(which & kept)))]
-    by_hand = int(np.sum(kept & (picks.origin == "manual")))
+    by_hand = int(np.sum(kept & (picks.origin == "manual") & np.isfinite(picks.bias_removed_s)))
     if by_hand:
         told.append(
             f"{by_hand} of {total} kept picks were placed by hand; no late bias was taken off them, and the intervals "

@@ -297,6 +297,13 @@ def test_a_pick_changed_by_hand_is_ringed(section, picks):
     assert not points(gather_figure(made_record(picks, record + 1), picks, section).axes[0], "o")
 
 
+def test_picks_that_are_all_by_hand_are_not_ringed(section, picks):
+    handed_in = dataclasses.replace(picks, origin=np.full(len(picks), "manual"))
+    figure = gather_figure(made_record(picks, 3), handed_in, section)
+    assert not points(figure.axes[0], "o")
+    assert "by hand" not in texts(figure)
+
+
 def wide_record(traces: int = 96, samples: int = 6000) -> ShotRecord:
     """Ninety-six channels along the made line, some dead, one of them silent."""
     rng = np.random.default_rng(2)

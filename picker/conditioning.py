@@ -16,6 +16,8 @@ IntArray = npt.NDArray[np.int64]
 
 # A trace with more equal neighbours than this is flat: a recorder that digitises noise repeats values less often.
 _FLAT_SHARE = 0.98
+# A trace this much weaker than the middle one carries no ground motion: a cut cable has its amplifier's noise left.
+_SILENT_SHARE = 1e-4
 # Three samples in a row at the largest or smallest value: a smooth peak has one or two, a clipped one has a plateau.
 _PLATEAU_SAMPLES = 3
 MAINS_HZ = (50.0, 60.0)
@@ -66,7 +68,8 @@ def trace_states(samples: npt.NDArray[np.floating], valid: IntArray) -> npt.NDAr
     Returns
     -------
     str (traces,)
-        `dead` (flat, or fewer than 8 samples), `clipped` (plateaus at both or either extreme) or `live`.
+        `dead` (flat, fewer than 8 samples, or next to nothing beside the other traces), `clipped` (plateaus at both or
+        either extreme) or `live`.
     """
     states = np.full(samples.shape[0], "live", dtype="<U7")
     for row, count in enumerate(valid.tolist()):
@@ -81,6 +84,10 @@ def trace_states(samples: npt.NDArray[np.floating], valid: IntArray) -> npt.NDAr
                 runs &= at[shift : at.size - _PLATEAU_SAMPLES + 1 + shift]
             if runs.any():
                 states[row] = "clipped"
+    alive = np.flatnonzero(states != "dead")
+    if alive.size:
+        peak = np.array([np.ptp(samples[row, : valid[row]]) for row in alive])
+        states[alive[peak < _SILENT_SHARE * np.median(peak)]] = "dead"
     return states
 
 

@@ -1,14 +1,14 @@
 """From the likelihood of an onset to its calibrated distribution: what is left of bias, and how wide it really is.
 
 The likelihood of `picker.reading` knows no wave's shape, so its median is off and its width is a scale rather than a
-standard error; the AIC of the same samples reads late. Both were measured on a library of onsets of many shapes in
-noise of many kinds (tests/onset_library.py, which writes data/onset_bias.json), as functions of how clearly the
-onset is seen and of how quickly onsets grow in its neighbourhood. Standardised by the width of the likelihood the
-errors hardly depend on frequency, on the sample interval or on the noise.
+standard error; and an onset is seen only once its signal stands out of the noise. Both were measured on a library of
+onsets of many shapes in noise of many kinds (tests/onset_library.py, which writes data/onset_bias.json), as functions
+of how clearly the onset is seen and of how quickly onsets grow in its neighbourhood. Standardised by the width of the
+likelihood the errors hardly depend on frequency, on the sample interval or on the noise.
 
 What the wave of one survey has of its own stays: all its onsets are off the mean of the library, the same way, by some
-share of the bias that was removed. The library knows how large that share is among its own waves
-(`common_share`); since no library has every wave, it is taken to be `UNKNOWN_SHARE` larger (squares added).
+share of the bias that was removed. The library knows how large that share is among its own waves (`common_share`);
+since no library has every wave, it is taken to be larger by `UNKNOWN_SHARE`, about as much again (squares added).
 """
 
 from __future__ import annotations
@@ -27,7 +27,7 @@ FloatArray = npt.NDArray[np.float64]
 
 LEVELS = (0.05, 0.16, 0.5, 0.84, 0.95)
 _NORMAL_95 = 1.6448536269514722
-UNKNOWN_SHARE = 0.45
+UNKNOWN_SHARE = 0.25
 _LEAST_OWN = 0.5  # the trace's own error is never less than this share of the whole
 
 
@@ -43,8 +43,8 @@ class Calibration:
         Common logarithm of the greatest log-likelihood of an onset over noise alone; ascending.
     standardised : float (growths, nodes, 5)
         Quantiles (LEVELS) of (true onset - median of the likelihood) / width of the likelihood.
-    aic_late : float (growths, nodes)
-        Median of (AIC onset - true onset) / width.
+    seen_late : float (growths, nodes)
+        Median of (where the signal stands three times above the noise - true onset) / width.
     common_share : float
         Standard deviation of what all onsets of a survey are off together, as a share of the bias removed.
     """
@@ -52,7 +52,7 @@ class Calibration:
     growth: FloatArray
     log_evidence: FloatArray
     standardised: FloatArray
-    aic_late: FloatArray
+    seen_late: FloatArray
     common_share: float
 
 
@@ -86,7 +86,7 @@ def calibration() -> Calibration:
         np.asarray(table["growth"], dtype=np.float64),
         np.asarray(table["log10_evidence"], dtype=np.float64),
         np.asarray(table["standardised_error_quantiles"], dtype=np.float64),
-        np.asarray(table["aic_late"], dtype=np.float64),
+        np.asarray(table["seen_late"], dtype=np.float64),
         float(table["common_share"]),
     )
 
@@ -106,14 +106,14 @@ def calibrate(reading: Reading, floor_s: float, table: Calibration | None = None
     Returns
     -------
     CalibratedOnset
-        `bias_removed_s` is how late the AIC reads such an onset on average.
+        `bias_removed_s` is how late such an onset is seen on average: its signal three times above the noise.
     """
     table = table or calibration()
     z = _at(table, table.standardised, reading)
     # each side is a half normal; its scale is the larger of what the 5 (95) and the 16 (84) % points ask for
     early = max((z[2] - z[0]) / _NORMAL_95, (z[2] - z[1]) / 0.9945)
     late = max((z[4] - z[2]) / _NORMAL_95, (z[3] - z[2]) / 0.9945)
-    bias_s = float(_at(table, table.aic_late[..., np.newaxis], reading)[0]) * reading.width_s
+    bias_s = float(_at(table, table.seen_late[..., np.newaxis], reading)[0]) * reading.width_s
     sides_s = np.array([early, late]) * reading.width_s
     own_s = np.sqrt(
         np.maximum(np.mean(sides_s**2) - (table.common_share * bias_s) ** 2, (_LEAST_OWN * sides_s.min()) ** 2)

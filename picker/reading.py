@@ -20,6 +20,7 @@ from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
+from scipy.stats import rankdata
 
 from picker.conditioning import Noise, block_means
 
@@ -314,7 +315,7 @@ def neighbours_growth(scores: Sequence[OnsetScores], offset_m: FloatArray) -> Fl
     """
     evidence = np.array([_log_mean(one.score, axis=1) for one in scores])
     votes = np.maximum(evidence - evidence.max(axis=1, keepdims=True), -_LOUDEST_VOTE)
-    rank = np.argsort(np.argsort(offset_m, kind="stable"), kind="stable")
+    rank = rankdata(offset_m)
     near = np.exp(-0.5 * ((rank[:, np.newaxis] - rank) / _GROWTH_NEIGHBOURS) ** 2)
     np.fill_diagonal(near, 0.0)
     # the mean, not the sum: none of these laws is quite the wave's own, so many traces know little more than one

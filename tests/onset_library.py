@@ -19,19 +19,23 @@ PRE_TRIGGER_S = 0.1
 LENGTH_S = 0.2
 INTERVALS_S = (0.000125, 0.00025, 0.0005, 0.001)
 DRIFT_HZ = 4.0
-AIC_ASTRAY_S = 0.005
+SEEN_AT = 3.0  # a signal that stands three times above the noise is seen by anybody
 CLEAR = 10.0  # an onset is seen beyond doubt where its log-likelihood over noise alone is larger than this
 NOISE_KINDS = ("white", "red", "drift", "wind")
 
 
 @dataclass(frozen=True, eq=False)
 class LibraryGather:
-    """Traces (traces, samples) that start PRE_TRIGGER_S before zero, their onsets and their signal-to-noise ratios."""
+    """Traces (traces, samples) that start PRE_TRIGGER_S before zero, their onsets and their signal-to-noise ratios.
+
+    `seen_s` is where the first arrival stands SEEN_AT times above the noise, or has its first peak where it never does.
+    """
 
     samples: FloatArray
     interval_s: float
     onset_s: FloatArray
     ratio: FloatArray
+    seen_s: FloatArray
 
 
 @dataclass(frozen=True)
@@ -126,6 +130,8 @@ def gather(
     onset = rng.uniform(0.02, 0.05, traces)
     ratios = np.full(traces, ratio) if ratio is not None else np.exp(rng.uniform(np.log(1.5), np.log(300), traces))
     common = draw_wave(rng)
+    after_s = 1e-5 * np.arange(8000)
+    seen = np.empty(traces)
     for row in range(traces):
         # the ground changes the wave a little on its way
         own = replace(
@@ -134,19 +140,20 @@ def gather(
             frequency_hz=common.frequency_hz * float(np.exp(rng.normal(0.0, 0.1))),
         )
         first = rng.choice([-1.0, 1.0]) * first_arrival(own, time_s - onset[row])
+        swing = ratios[row] * np.abs(first_arrival(own, after_s))
+        seen[row] = onset[row] + after_s[np.argmax(swing > min(SEEN_AT, 0.99 * ratios[row]))]
         roll = ground_roll(rng, time_s - onset[row] - float(np.exp(rng.uniform(np.log(0.001), np.log(0.04)))))
         samples[row] += ratios[row] * (first + roll)
-    return LibraryGather(samples, interval, onset, ratios)
+    return LibraryGather(samples, interval, onset, ratios, seen)
 
 
 def readings(rng: np.random.Generator, gathers: int, ratio: float | None = None) -> FloatArray:
     """Read the onsets of some gathers.
 
-    Rows of median, width, log-likelihood, AIC onset, true onset, ratio, gather, growth.
+    Rows of median, width, log-likelihood, where it is seen, true onset, ratio, gather, growth.
     """
     from picker.conditioning import fit_noise, remove_drift
-    from picker.onsets import aic
-    from picker.reading import READING, blocks_for_reading, neighbours_growth, prepare, read_onset, score_onset
+    from picker.reading import blocks_for_reading, neighbours_growth, prepare, read_onset, score_onset
 
     rows = []
     for number in range(gathers):
@@ -168,11 +175,8 @@ def readings(rng: np.random.Generator, gathers: int, ratio: float | None = None)
         growth = neighbours_growth(scores, -drawn.ratio)
         for row, (score, log_growth) in enumerate(zip(scores, growth, strict=True)):
             found = read_onset(score, log_growth)
-            begin = int((about[row] - READING.before_s + PRE_TRIGGER_S) / drawn.interval_s)
-            end = int((about[row] + READING.after_s + PRE_TRIGGER_S) / drawn.interval_s)
-            late = -PRE_TRIGGER_S + (begin + int(np.argmin(aic(samples[row, begin:end]))) + 0.5) * drawn.interval_s
             brief = (found.median_s, found.width_s, found.log_likelihood)
-            rows.append((*brief, late, drawn.onset_s[row], drawn.ratio[row], number, found.growth))
+            rows.append((*brief, drawn.seen_s[row], drawn.onset_s[row], drawn.ratio[row], number, found.growth))
     return np.array(rows)
 
 
@@ -190,14 +194,12 @@ def quantiles(value: FloatArray, weight: FloatArray, levels: tuple[float, ...]) 
 
 
 def fit(table: FloatArray) -> dict[str, object]:
-    """Quantiles of standardised errors, and how late AIC is, about every node of growth and evidence."""
+    """Quantiles of standardised errors, and how late onsets are seen, about every node of growth and evidence."""
     from picker.late_bias import LEVELS
 
-    median, width, likelihood, late, truth = table[:, :5].T
+    median, width, likelihood, seen, truth = table[:, :5].T
     growth, evidence = table[:, 7], np.log10(np.maximum(likelihood, 1e-3))
-    error, aic_late = (truth - median) / width, (late - truth) / width
-    # where AIC finds noise instead of the onset it says nothing of lateness
-    onset = np.abs(late - truth) < AIC_ASTRAY_S
+    error, late = (truth - median) / width, (seen - truth) / width
     errors, lateness = [], []
     for at in GROWTHS:
         weights = [
@@ -205,7 +207,7 @@ def fit(table: FloatArray) -> dict[str, object]:
             for node in LOG_EVIDENCE
         ]
         errors.append([quantiles(error, weight, LEVELS).round(4).tolist() for weight in weights])
-        lateness.append([round(float(quantiles(aic_late[onset], w[onset], (0.5,))[0]), 4) for w in weights])
+        lateness.append([round(float(quantiles(late, weight, (0.5,))[0]), 4) for weight in weights])
     return {
         "made_by": "python tests/onset_library.py",
         "readings": int(table.shape[0]),
@@ -213,7 +215,7 @@ def fit(table: FloatArray) -> dict[str, object]:
         "levels": LEVELS,
         "log10_evidence": LOG_EVIDENCE,
         "standardised_error_quantiles": errors,
-        "aic_late": lateness,
+        "seen_late": lateness,
     }
 
 
@@ -226,7 +228,7 @@ def common_share(table: FloatArray, levels: dict[str, object]) -> float:
     from picker.reading import Reading
 
     columns = (
-        np.array(levels[name]) for name in ("growth", "log10_evidence", "standardised_error_quantiles", "aic_late")
+        np.array(levels[name]) for name in ("growth", "log10_evidence", "standardised_error_quantiles", "seen_late")
     )
     calibration = Calibration(*columns, common_share=0.0)
     factor, chance = [], []

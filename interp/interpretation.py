@@ -29,6 +29,7 @@ BoolArray = npt.NDArray[np.bool_]
 HIGHEST_CONFIDENCE = 0.995  # nobody's pick is certain to be on the right phase
 LEAST_SIGMA_S = 2e-5  # below this the errors of the forward model would count
 LEAST_PICKS = 4
+MOST_ASIDE = 0.2  # a result for which more of the picks are set aside than this is in doubt
 LEAST_HEAD = 3  # fewer head waves than this are taken for chance
 LEAST_DIRECT = 3  # fewer direct arrivals than this do not measure the overburden
 UNSEEN_UPPER_M_S = 600.0  # middle of the range of dry soils and weathered ground
@@ -138,6 +139,12 @@ def _interpret(
         warnings.append(
             "All head waves ran in one direction: the dip of the refractor is unknown, and its velocity and depth are "
             "only as good as the assumption that it slopes by less than about ten degrees."
+        )
+    aside = int(np.sum(top.weight < 0.5))
+    if aside > MOST_ASIDE * rows.size:
+        warnings.append(
+            f"{aside} of {rows.size} picks do not fit a ground of two layers and were set aside: the result rests on the "
+            "rest. Look at the travel-time figure; times, positions or the model may be wrong."
         )
     if not top.converged:
         warnings.append("The solution had not settled when its steps ran out: look at the travel-time figure.")
@@ -290,7 +297,7 @@ def _section(
         coverage=control.coverage[None, :],
         deeper_than_m=deeper[None, :],
         picks=control.picks[None, :],
-        note=_notes(control, known, faster)[None, :],
+        note=_notes(control, known)[None, :],
         fit=PickFit(
             record=used.record,
             channel=used.channel,
@@ -316,11 +323,11 @@ def _section(
     )
 
 
-def _notes(control: Control, known: BoolArray, faster_m_s: float) -> npt.NDArray[np.str_]:
+def _notes(control: Control, known: BoolArray) -> npt.NDArray[np.str_]:
     """A sentence for every station that needs one."""
     notes = np.full(known.size, "", dtype=object)
     notes[control.coverage == "one"] = "seen from one side only"
     notes[control.between] = "interpolated between controlled points"
-    notes[~known] = f"no control; a refractor of {faster_m_s:.0f} m/s must be deeper than deeper_than_m"
+    notes[~known] = "no control; a refractor must be deeper than told"
     notes[~known & (control.reach_m == 0)] = "no control"
     return notes.astype(np.str_)

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import re
 from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
 
@@ -67,9 +66,7 @@ def depths_of_geophones(section: DepthSection, units: str) -> TextTable:
         "coverage": shown["coverage"],
         "picks": shown["picks"],
     }
-    # in the CSV file the depth that must be exceeded has a column of its own, here it stands in its place
-    notes = [re.sub(r"\bdeeper_than(_m)?\b", "told", note) for note in shown["note"]]
-    return with_notes(table, notes)
+    return with_notes(table, shown["note"])
 
 
 def records_table(section: DepthSection, picks: PickTable, units: str) -> TextTable:

@@ -19,7 +19,7 @@ from interp.velocity_zones import velocity_zones
 Columns = dict[str, npt.NDArray[Any]]
 
 NO_CONTROL = "no control: no first arrival from this refractor bears on this point"
-ONLY_DEEPER = "refractor not seen in first arrivals here; it must be deeper than deeper_than"
+ONLY_DEEPER = "refractor not seen in first arrivals here; it must be deeper than told"
 
 
 def depth_columns(section: DepthSection) -> Columns:

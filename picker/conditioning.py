@@ -241,7 +241,7 @@ def quiet_start(samples: FloatArray, share: float) -> IntArray:
     """How many samples at the start of each trace stay below `share` of its largest magnitude; int (traces,)."""
     magnitude = np.abs(samples)
     loud = magnitude > share * magnitude.max(axis=1, keepdims=True)
-    return np.where(loud.any(axis=1), loud.argmax(axis=1), samples.shape[1]).astype(np.int64)
+    return np.asarray(np.where(loud.any(axis=1), loud.argmax(axis=1), samples.shape[1]), dtype=np.int64)
 
 
 def recent_level(samples: FloatArray, noise: Noise, row: int, stop: int, window: int) -> float:

@@ -143,8 +143,8 @@ def _interpret(
     aside = int(np.sum(top.weight < 0.5))
     if aside > MOST_ASIDE * rows.size:
         warnings.append(
-            f"{aside} of {rows.size} picks do not fit a ground of two layers and were set aside: the result rests on the "
-            "rest. Look at the travel-time figure; times, positions or the model may be wrong."
+            f"{aside} of {rows.size} picks do not fit a ground of two layers and were set aside: the result rests on "
+            "the others. Look at the travel-time figure; times, positions or the model may be wrong."
         )
     if not top.converged:
         warnings.append("The solution had not settled when its steps ran out: look at the travel-time figure.")

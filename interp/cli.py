@@ -156,7 +156,7 @@ def process(
     units: str,
     title: str | None,
 ) -> None:
-    """Take shot records (SEG-Y) or picks (.csv) the whole way: load, pick, interpret, export and report.
+    """Take shot records (SEG-Y, SEG-2) or picks (.csv) the whole way: load, pick, interpret, export and report.
 
     DIR gets the survey file line.survey, the tables, the figures and report.html. A survey file that is there
     already is added to, and what was changed in it by hand stays. Picks that come in from a file are used as they

@@ -54,7 +54,7 @@ def load(
     geometry: Path | None,
     units: str,
 ) -> None:
-    """Load shot records (SEG-Y) and picks (.csv) into a survey file.
+    """Load shot records (SEG-Y, SEG-2) and picks (.csv) into a survey file.
 
     The survey file is created where it is not there. Records stay in their files: keep those. Loading the same
     files again changes nothing; if one file cannot be used, none is loaded.

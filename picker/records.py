@@ -146,7 +146,8 @@ class ShotHeader:
     format : str
         Name of the format, for people.
     encoding : str
-        Byte order and kind of the samples (`picker.samples`); empty where there are picks only, no samples.
+        Byte order and kind of the samples (`picker.samples`), or `seg2` where each trace says it itself; empty where
+        there are picks only, no samples.
     first_byte : int
         Byte offset of the first trace, from 0.
     sample_byte : int (traces,)
@@ -194,8 +195,6 @@ def read_shot(header: ShotHeader) -> ShotRecord:
     InputError
         If there are no samples, or the file cannot be read or is shorter than it was.
     """
-    from picker.samples import read_samples, sample_bytes
-
     if not header.has_samples:
         raise InputError(
             "there are picks only, no samples",
@@ -203,18 +202,7 @@ def read_shot(header: ShotHeader) -> ShotRecord:
             remedy="Load the file with the shot record first",
         )
     try:
-        size = header.file.stat().st_size
-        end = int((header.sample_byte + header.valid * sample_bytes(header.encoding)).max())
-        if size < end:
-            raise InputError(
-                "the file is shorter than when it was loaded",
-                file=header.file,
-                record=header.record,
-                expected=f"at least {end} bytes",
-                found=f"{size}",
-                remedy="Put the original file back",
-            )
-        samples = read_samples(header.file, header.encoding, header.sample_byte, header.valid)
+        samples = _samples(header)
     except OSError as error:
         raise InputError(
             f"cannot be read ({error.strerror or error})",
@@ -238,6 +226,28 @@ def read_shot(header: ShotHeader) -> ShotRecord:
         polarity=header.polarity,
         origin=Origin(os.fspath(header.file), header.format, header.first_byte),
     )
+
+
+def _samples(header: ShotHeader) -> npt.NDArray[np.float32]:
+    """Samples of a shot, whatever its format."""
+    if header.encoding == "seg2":
+        from picker.seg2 import read_seg2_samples
+
+        return read_seg2_samples(header.file, header.sample_byte, header.valid)
+    from picker.samples import read_samples, sample_bytes
+
+    size = header.file.stat().st_size
+    end = int((header.sample_byte + header.valid * sample_bytes(header.encoding)).max())
+    if size < end:
+        raise InputError(
+            "the file is shorter than when it was loaded",
+            file=header.file,
+            record=header.record,
+            expected=f"at least {end} bytes",
+            found=f"{size}",
+            remedy="Put the original file back",
+        )
+    return read_samples(header.file, header.encoding, header.sample_byte, header.valid)
 
 
 def scan_file(
@@ -266,8 +276,6 @@ def scan_file(
     InputError
         If the file cannot be read or is in no format that is read here.
     """
-    from picker.segy import scan_segy
-
     place = Path(path)
     if not place.exists():
         raise InputError("there is no such file", file=place, remedy="Check the path")
@@ -295,13 +303,11 @@ def scan_file(
             remedy="Copy it again from the recorder",
         )
     if start[:2] in (b"\x55\x3a", b"\x3a\x55"):
-        raise InputError(
-            "is a SEG-2 file, which this version does not read yet",
-            file=place,
-            expected="SEG-Y",
-            found="the SEG-2 mark 3A55 in its first two bytes",
-            remedy="Write it as SEG-Y with the recorder's own program",
-        )
+        from picker.seg2 import scan_seg2
+
+        return scan_seg2(place, interval_s, geometry)
+    from picker.segy import scan_segy
+
     return scan_segy(place, interval_s, geometry)
 
 

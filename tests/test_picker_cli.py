@@ -98,7 +98,7 @@ BAD_FILES = {
     "empty.sgy": (b"", "the file is empty"),
     "no_interval.sgy": (segy(spread(sample_interval_us=0), sample_interval_us=0), "there is no sample interval"),
     "no_traces.sgy": (segy([]), "has no traces"),
-    "record.dat": (b"\x55\x3a\x01\x00" + bytes(400), "SEG-2 file, which this version does not read yet"),
+    "record.dat": (b"\x55\x3a\x01\x00" + bytes(400), "the file descriptor block gives no room for its traces"),
     "bad.csv": (b"shot_x,geophone_x,time_ms,sigma_ms\n0,1,x,1\n", "line 2, column time_ms"),
     "columns.csv": (b"x,t\n1,2\n", "no column source_x_m, receiver_x_m, time_ms"),
 }

@@ -268,12 +268,10 @@ def test_a_file_that_ends_after_a_whole_trace_shows_by_its_short_record(put):
         (b"time,amplitude\n" * 400, "is no SEG-Y file.*found text"),
         (b"\x89PNG" + bytes(100), "is no SEG-Y file.*found 104 bytes"),
         (np.random.default_rng(1).bytes(5000), "is no SEG-Y file.*format codes"),
-        (b"\x55\x3a\x01\x00" + bytes(5000), "is a SEG-2 file, which this version does not read"),
-        (b"\x3a\x55\x00\x01" + bytes(5000), "is a SEG-2 file, which this version does not read"),
         (segy([]), "has no traces.*byte 3601"),
         (segy(spread(samples=0), samples=0), "has traces without samples"),
     ],
-    ids=["empty", "short text", "long text", "other", "noise", "seg2", "seg2 big-endian", "no traces", "no samples"],
+    ids=["empty", "short text", "long text", "other", "noise", "no traces", "no samples"],
 )
 def test_what_is_no_segy_file_is_refused_and_the_message_says_what_it_is(put, content, message):
     with pytest.raises(InputError, match=f"shot.sgy: {message}"):

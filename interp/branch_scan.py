@@ -64,7 +64,7 @@ class Scan:
     @property
     def probability(self) -> FloatArray:
         """Probability of every split; shape (n + 1,)."""
-        return np.exp(self.log_weight - logsumexp(self.log_weight))
+        return np.asarray(np.exp(self.log_weight - logsumexp(self.log_weight)))
 
     @property
     def best(self) -> int:

@@ -13,10 +13,11 @@ from scipy.special import expit
 from threadpoolctl import threadpool_limits
 
 from interp.branches import assign_branches
+from interp.common_bias import COMMON_SHARE
 from interp.control import Control, control_of_stations, least_depth_m
 from interp.ground import lay_ground
 from interp.line import Line, lay_out_line
-from interp.refractor import COMMON_SHARE, Observations, Problem, Roughness, Solution, solve
+from interp.refractor import Observations, Problem, Roughness, Solution, solve
 from interp.section import DepthSection, PickFit
 from interp.spread import Ensemble, branch_probability, draw, weigh_roughness
 from interp.start import branch_start, flat_start

@@ -16,6 +16,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
+from interp.common_bias import BIAS_MEAN, BIAS_SIGMA, bias_derivatives
 from interp.fermat import two_layer_arrivals
 from interp.ground import Ground, path_integral
 from interp.line import Line
@@ -26,16 +27,6 @@ BoolArray = npt.NDArray[np.bool_]
 
 MIN_DEPTH_M = 0.05  # a refractor nearer than this cannot be told from the ground
 DIP_SIGMA = 0.18  # prior standard deviation of the overall slope of the refractor: tan 10 degrees
-# What is left of the late bias, as a share of what was removed. The waves of one survey have a shape of their own: 0.2
-# on onsets of many shapes (tests/onset_library.py), and about as much again, squares added, because no library has them
-# all; direct and head waves apart, since they do not start alike. Third, what comes on top from the shot to the far end
-# of the spread: head waves start ever more gently on the way, even in ground without absorption (exact waves of a flat
-# refractor 5 m deep, tests/external/layered_reference.py: a tenth of the first swing 1.8 ms after the onset at 20 m,
-# 3.0 ms at 120 m, 60 Hz).
-BIAS_MEAN = (0.0, 0.0, 0.3)
-BIAS_SIGMA = (0.3, 0.3, 0.3)
-COMMON_SHARE = 0.2  # what of that the library knows to be common to all picks: no part of any one pick's own error
-BIAS_GROUP = 20  # picks of about one offset, enough for a median
 FREE_STEPS = 8  # steps in which picks may change branch
 SETTLED = 0.02  # a step that moves predictions by less than this share of their errors (rms) is the last
 WILD_WINDOW_S = 0.05  # a pick on the wrong phase lies anywhere within this of the right one
@@ -239,7 +230,7 @@ def linearise(problem: Problem, unknowns: FloatArray) -> Linearised:
     shared[rows, columns.shift.start + observed.record_of] = 1
     shared[rows, columns.static.start + line.station_of] = 1
     direct_by, head_by = shared.copy(), shared
-    direct_by[:, columns.bias], head_by[:, columns.bias] = _bias_by(observed.bias_removed_s, run * line.stretch)
+    direct_by[:, columns.bias], head_by[:, columns.bias] = bias_derivatives(observed.bias_removed_s, run * line.stretch)
     direct_by[:, columns.upper_mean] = run * lengthening
     direct_by[:, columns.upper] = upper_path * lengthening[:, None]
     head_by[:, columns.lower_mean] = run * line.stretch
@@ -251,20 +242,6 @@ def linearise(problem: Problem, unknowns: FloatArray) -> Linearised:
     direct = direct + common + direct_by[:, columns.bias] @ unknowns[columns.bias]
     head = head + common + head_by[:, columns.bias] @ unknowns[columns.bias]
     return Linearised(direct, head, direct_by, head_by, *feet)
-
-
-def _bias_by(removed_s: FloatArray, offset_m: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """How direct and head waves' times (picks, BIAS_SIGMA) change with what is left of the late bias.
-
-    What was removed is taken as it goes with offset: from pick to pick it changes with the noise, as the error of
-    the reading does, and would make the common factor look known.
-    """
-    groups = np.array_split(np.argsort(offset_m, kind="stable"), max(1, offset_m.size // BIAS_GROUP))
-    at_m = np.array([np.median(offset_m[group]) for group in groups])
-    smooth = np.interp(offset_m, at_m, [np.median(removed_s[group]) for group in groups])
-    nothing = np.zeros(removed_s.size)
-    growing = smooth * offset_m / max(float(offset_m.max()), 1e-9)
-    return np.column_stack([smooth, nothing, nothing]), np.column_stack([nothing, smooth, growing])
 
 
 @dataclass(frozen=True, eq=False)

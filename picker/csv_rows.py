@@ -34,6 +34,17 @@ class CsvRows:
         Our names; other columns are passed over.
     needed : sequence of str
         Columns without which the file is refused.
+    unnamed : sequence of str, optional
+        Our names, in order, for columns of numbers that have no line of names; more columns than names are refused.
+
+    Attributes
+    ----------
+    columns : dict of str to int
+        Which columns are there, by our names.
+    lines : list of int
+        Line of the file in which each row begins.
+    unnamed : bool
+        True where the names were not in the file.
 
     Raises
     ------
@@ -47,11 +58,15 @@ class CsvRows:
         own_name: Callable[[str], tuple[str, bool]],
         known: Sequence[str],
         needed: Sequence[str],
+        unnamed: Sequence[str] = (),
     ) -> None:
         self.path = path
         text = _text(path)
         separator = _separator(text)
         rows = _rows(path, text, separator)
+        self.unnamed = bool(rows) and len(needed) <= len(rows[0][1]) <= len(unnamed) and _all_numbers(rows[0][1])
+        if self.unnamed:
+            rows.insert(0, (rows[0][0], list(unnamed[: len(rows[0][1])])))
         if len(rows) < 2:
             raise InputError(
                 "holds no rows",
@@ -101,6 +116,10 @@ class CsvRows:
                     remedy="Put text that holds the separator in double quotes",
                 )
         self._decimal_comma = separator != ","
+
+    def stated(self, name: str) -> str:
+        """How the file heads a column that is there."""
+        return self._stated[name]
 
     def refuse(self, row: int, name: str, expected: str) -> InputError:
         """Build the error that refuses one cell."""
@@ -215,6 +234,14 @@ def _text(path: Path) -> str:
         return raw.decode("utf-8-sig")
     except UnicodeDecodeError:
         return raw.decode("cp1252", errors="replace")
+
+
+def _all_numbers(cells: Sequence[str]) -> bool:
+    """Whether a row holds numbers only, as no line of names does."""
+    try:
+        return all(np.isfinite(float(cell.strip().replace(",", "."))) for cell in cells)
+    except ValueError:
+        return False
 
 
 def _separator(text: str) -> str:

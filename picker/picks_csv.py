@@ -55,13 +55,26 @@ _OTHER_NAMES = {
     "geophone_z": "receiver_z",
     "geophone_elevation": "receiver_z",
     "receiver_elevation": "receiver_z",
-    "pick_ms": "time_ms",
-    "first_break_ms": "time_ms",
-    "first_arrival_ms": "time_ms",
+    "sx": "source_x",
+    "x_shot": "source_x",
+    "x_source": "source_x",
+    "gx": "receiver_x",
+    "rx": "receiver_x",
+    "x_geophone": "receiver_x",
+    "x_receiver": "receiver_x",
+    **{
+        name: "time_ms"
+        for what in ("time", "t", "pick", "pick_time", "first_break", "first_arrival", "arrival", "travel_time")
+        for name in (what, f"{what}_ms")
+    },
+    "ms": "time_ms",
     "error_ms": "sigma_ms",
     "std_ms": "sigma_ms",
 }
 _NEEDED = ("source_x_m", "receiver_x_m", "time_ms")
+# What columns of numbers without a line of names stand for, and how that is told.
+_UNNAMED = ("source_x_m", "receiver_x_m", "time_ms", "record")
+_UNNAMED_TOLD = "shot x (m), geophone x (m), time (ms), record"
 # Rock does not carry sound faster (peridotite about 8 km/s); faster on average means times in another unit.
 _FASTEST_M_S = 9000.0
 
@@ -164,7 +177,7 @@ def read_picks_csv(path: Path, sigma_s: float | None = None) -> PicksFile:
         If the file cannot be read, a column is missing, a cell cannot be understood, a trace comes twice, or picks
         have no error and none is given.
     """
-    rows = CsvRows(path, own_name, COLUMNS, _NEEDED)
+    rows = CsvRows(path, own_name, COLUMNS, _NEEDED, unnamed=_UNNAMED)
     cell = rows.floats
     sigma_missing = "sigma_ms" not in rows.columns
     if sigma_missing and sigma_s is None:
@@ -274,6 +287,12 @@ def _findings(table: PickTable, rows: CsvRows, unknown: int, sigma_s: float | No
     if not any(name in rows.columns for name in ("source_z_m", "receiver_z_m")):
         text = "There are no elevations: the ground is taken as flat."
         findings.append(Finding("note", text, "Where it is not, add source_z_m and receiver_z_m.", file))
+    if rows.unnamed:
+        text = f"There is no line of column names: the columns are taken as {_UNNAMED_TOLD}."
+        findings.append(Finding("look", text, "If they are others, name them in the first line.", file))
+    elif "ms" not in re.split(r"[^a-z]+", rows.stated("time_ms").lower()):
+        text = f"The column {rows.stated('time_ms')} has no unit: it is taken as milliseconds."
+        findings.append(Finding("note", text, "If it is another, name the column time_ms and convert it.", file))
     kept = table.kept & (table.offset_m > 0)
     if kept.any():
         fast = table.offset_m[kept] > _FASTEST_M_S * np.maximum(table.time_s[kept], 0.0)

@@ -224,3 +224,34 @@ def test_binary_data_and_a_missing_file_are_refused(put, tmp_path):
         read_picks_csv(put(b"PK\x03\x04\0\0"))
     with pytest.raises(InputError, match="cannot be read"):
         read_picks_csv(tmp_path / "none.csv")
+
+
+@pytest.mark.parametrize(
+    "header",
+    ["shot x,geophone x,ms", "Shot X (m),Geophone X (m),Time (ms)", "sx,gx,t_ms", "x_source,x_receiver,pick_ms"],
+)
+def test_other_common_headings_are_understood(put, header):
+    read = read_picks_csv(put(f"{header}\n0,4,5\n0,8,7\n"), 5e-4)
+    assert read.table.time_s.tolist() == [0.005, 0.007]
+    assert read.table.receiver_xyz[:, 0].tolist() == [4, 8]
+    assert not any("no unit" in finding.text for finding in read.findings)
+
+
+def test_a_time_without_unit_is_milliseconds_and_that_is_said(put):
+    read = read_picks_csv(put("shot_x,geophone_x,time\n0,4,5\n0,8,7\n"), 5e-4)
+    assert read.table.time_s.tolist() == [0.005, 0.007]
+    assert any("time has no unit: it is taken as milliseconds" in finding.text for finding in read.findings)
+
+
+def test_numbers_without_column_names_are_shot_geophone_time_and_record_and_that_is_said(put):
+    read = read_picks_csv(put("0,4,5.5,3\n0,8,7.25,3\n10,4,6,4\n"), 5e-4)
+    assert read.table.record.tolist() == [3, 3, 4]
+    assert read.table.source_xyz[:, 0].tolist() == [0, 0, 10]
+    assert read.table.time_s.tolist() == [0.0055, 0.00725, 0.006]
+    assert any(finding.severity == "look" and "no line of column names" in finding.text for finding in read.findings)
+    assert read_picks_csv(put("0;4;5,5\n0;8;7,25\n"), 5e-4).table.time_s.tolist() == [0.0055, 0.00725]
+
+
+def test_five_columns_without_names_are_refused_rather_than_guessed(put):
+    with pytest.raises(InputError, match="no column source_x_m"):
+        read_picks_csv(put("0,4,5,1,1\n0,8,7,1,2\n"), 5e-4)

@@ -33,6 +33,9 @@ _CANDIDATE_STEP_S = 2e-4
 _STRENGTH_AFTER_S = 0.004
 _STRENGTHS = 0.5 * 2.0 ** np.arange(19)
 _INTEGRATIONS = (2, 3, 4, 5)
+# Once the signal stands this far above the noise the onset is over. What comes then, often a hundred times stronger,
+# follows laws of its own, and would drown what the first weak samples say.
+_ONSET_ENDS = 40.0
 # No signal follows a smooth law better than to this share of its strength.
 _MODEL_ERROR = 1e-3
 # How many neighbours, counted by offset, tell how quickly an onset grows, and how much one may say at the most (nats).
@@ -156,9 +159,11 @@ def onset_log_likelihood(model: OnsetModel, white: FloatArray, candidates: int) 
         phase from the earliest before sample c.
     """
     length = white.size
+    loud = np.abs(white) > _ONSET_ENDS
+    end = min(length, int(np.argmax(loud)) + 2) if loud.any() else length
     padded = np.concatenate([white, np.zeros(candidates)])
     windows = np.lib.stride_tricks.sliding_window_view(padded, length)[:candidates]
-    count = length - np.arange(candidates)
+    count = np.maximum(end - np.arange(candidates), 0)
     rest = windows @ np.swapaxes(model.inverse, 3, 4)  # growths, strengths, phases, candidates, length
     gained = 0.5 * (windows**2 - rest**2)
     inside = np.arange(length) < count[:, np.newaxis]

@@ -121,14 +121,14 @@ def gather(
 ) -> LibraryGather:
     """Draw traces with one kind of noise and one wave, each with its own onset and ground roll.
 
-    `ratio` is the peak of the first swing over the standard deviation of the noise; drawn from 1.5 to 300 unless given.
+    `ratio` is the peak of the first swing over the standard deviation of the noise; 1.5 to 3000 unless given.
     """
     interval = float(rng.choice(INTERVALS_S)) if interval_s is None else interval_s
     kind = NOISE_KINDS[int(rng.integers(len(NOISE_KINDS)))]
     time_s = -PRE_TRIGGER_S + interval * np.arange(round(LENGTH_S / interval))
     samples = noise(rng, kind, (traces, time_s.size), interval)
     onset = rng.uniform(0.02, 0.05, traces)
-    ratios = np.full(traces, ratio) if ratio is not None else np.exp(rng.uniform(np.log(1.5), np.log(300), traces))
+    ratios = np.full(traces, ratio) if ratio is not None else np.exp(rng.uniform(np.log(1.5), np.log(3000), traces))
     common = draw_wave(rng)
     after_s = 1e-5 * np.arange(8000)
     seen = np.empty(traces)

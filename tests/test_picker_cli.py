@@ -100,7 +100,7 @@ BAD_FILES = {
     "no_traces.sgy": (segy([]), "has no traces"),
     "record.dat": (b"\x55\x3a\x01\x00" + bytes(400), "the file descriptor block gives no room for its traces"),
     "bad.csv": (b"shot_x,geophone_x,time_ms,sigma_ms\n0,1,x,1\n", "line 2, column time_ms"),
-    "columns.csv": (b"x,t\n1,2\n", "no column source_x_m, receiver_x_m, time_ms"),
+    "columns.csv": (b"x,z\n1,2\n", "no column source_x_m, receiver_x_m, time_ms"),
 }
 
 
